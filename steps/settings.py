@@ -45,7 +45,9 @@ class Clock(Section):
 
     time_scale: Literal["utc", "gps"] = Field("utc", description="scale the instrument stamps in")
     offset_s: float = Field(ge=-1e6, le=1e6, description="seconds to add to the logged time to get it right")
-    drift_s_per_day: float = Field(0.0, ge=-100, le=100, description="further seconds to add for each day after `reference`")
+    drift_s_per_day: float = Field(
+        0.0, ge=-100, le=100, description="further seconds to add for each day after `reference`"
+    )
     reference: datetime | None = Field(None, description="instant (UTC) at which offset_s holds; needed with a drift")
 
     @model_validator(mode="after")
@@ -58,7 +60,9 @@ class Clock(Section):
 class Time(Section):
     """Where the time of a delimited file stands and how it is written."""
 
-    columns: list[str] = Field(min_length=1, max_length=4, description="columns that hold date and time, in the order of `layout`")
+    columns: list[str] = Field(
+        min_length=1, max_length=4, description="columns that hold date and time, in the order of `layout`"
+    )
     layout: str = Field(
         "iso",
         description="iso, epoch_s, or a strptime pattern for the columns joined by one blank, e.g. '%Y %j %H:%M:%S.%f'",
@@ -70,7 +74,9 @@ class Delimited(Section):
 
     format: Literal["delimited"]
     files: Files
-    delimiter: str = Field(",", min_length=1, max_length=5, description="one character, or tab, or space for any run of blanks")
+    delimiter: str = Field(
+        ",", min_length=1, max_length=5, description="one character, or tab, or space for any run of blanks"
+    )
     skip_rows: int = Field(0, ge=0, le=1000, description="rows before the heading row (or before the data)")
     names: list[str] | None = Field(None, description="names of the columns, for a file without a heading row")
     comment: str | None = Field("#", max_length=1, description="rows that start with this character are skipped")
@@ -99,7 +105,9 @@ class DelimitedReadings(Delimited):
 class NavigationColumns(Section):
     """Which column of a delimited navigation file holds what."""
 
-    latitude_deg: str = Field(description="column of the latitude: decimal degrees, or degrees and minutes with a letter")
+    latitude_deg: str = Field(
+        description="column of the latitude: decimal degrees, or degrees and minutes with a letter"
+    )
     longitude_deg: str = Field(description="column of the longitude")
     heading_deg: str | None = Field(None, description="column of the gyro heading, degrees")
 
@@ -155,7 +163,9 @@ class ObservatoryBase(Section):
     name: str = Field(min_length=1, description="name of the station")
     latitude_deg: float | None = Field(None, ge=-90, le=90, description="overrides the header; geodetic latitude")
     longitude_deg: float | None = Field(None, ge=-360, le=360, description="overrides the header; east positive")
-    height_m: float | None = Field(None, ge=-500, le=9000, description="overrides the header; height above the ellipsoid")
+    height_m: float | None = Field(
+        None, ge=-500, le=9000, description="overrides the header; height above the ellipsoid"
+    )
     clock: Clock = Clock(offset_s=0.0)
 
 
@@ -163,8 +173,8 @@ class Ingest(Section):
     """Raw readings and navigation."""
 
     readings: Annotated[DelimitedReadings | TracklineData, Field(discriminator="format")]
-    navigation: list[Annotated[DelimitedNavigation | NmeaNavigation | TracklineData, Field(discriminator="format")]] = Field(
-        min_length=1, description="navigation sources, joined"
+    navigation: list[Annotated[DelimitedNavigation | NmeaNavigation | TracklineData, Field(discriminator="format")]] = (
+        Field(min_length=1, description="navigation sources, joined")
     )
 
 
@@ -174,8 +184,12 @@ class Ingest(Section):
 class Lines(Section):
     """Which readings belong to which line."""
 
-    log: str | None = Field(None, description="line log, CSV: line, kind, start_utc, end_utc; without it lines are found")
-    course_tolerance_deg: float = Field(15.0, gt=0, le=90, description="lines found: course stays within this of the line's own")
+    log: str | None = Field(
+        None, description="line log, CSV: line, kind, start_utc, end_utc; without it lines are found"
+    )
+    course_tolerance_deg: float = Field(
+        15.0, gt=0, le=90, description="lines found: course stays within this of the line's own"
+    )
     shortest_line_km: float = Field(10.0, gt=0, description="lines found: shorter stretches are transit")
     longest_gap_s: float = Field(1800.0, gt=0, description="lines found: a longer silence ends a line")
 
@@ -208,8 +222,12 @@ class Layback(Section):
     )
     log: str | None = Field(None, description="cable log, CSV: time_utc, cable_out_m; steps in time")
     cable_out_m: float | None = Field(None, ge=0, le=5000, description="constant cable-out, where there is no log")
-    cable_form: Literal["straight", "fraction"] = Field("straight", description="straight cable sqrt(c^2 - depth^2), or a fraction of it")
-    fraction: float = Field(1.0, gt=0, le=1, description="layback as a fraction of cable-out, with cable_form: fraction")
+    cable_form: Literal["straight", "fraction"] = Field(
+        "straight", description="straight cable sqrt(c^2 - depth^2), or a fraction of it"
+    )
+    fraction: float = Field(
+        1.0, gt=0, le=1, description="layback as a fraction of cable-out, with cable_form: fraction"
+    )
 
     @model_validator(mode="after")
     def _cable_known(self):
@@ -223,11 +241,17 @@ class Position(Section):
 
     antenna_to_tow_point: AntennaToTowPoint
     layback: Layback
-    sensor_depth_m: float | None = Field(None, ge=-500, le=6000, description="depth where none is logged; positive downwards")
-    sea_surface_height_m: float = Field(0.0, ge=-120, le=120, description="sea surface above the ellipsoid (geoid height), for the main field")
+    sensor_depth_m: float | None = Field(
+        None, ge=-500, le=6000, description="depth where none is logged; positive downwards"
+    )
+    sea_surface_height_m: float = Field(
+        0.0, ge=-120, le=120, description="sea surface above the ellipsoid (geoid height), for the main field"
+    )
     fastest_ship_mps: float = Field(12.0, gt=0, le=60, description="navigation that needs more speed is dropped")
     longest_gap_s: float = Field(120.0, gt=0, description="longest gap in navigation that is bridged")
-    smoothing_s: float = Field(30.0, ge=0, le=600, description="time constant of the smoothing of the navigation; 0 for none")
+    smoothing_s: float = Field(
+        30.0, ge=0, le=600, description="time constant of the smoothing of the navigation; 0 for none"
+    )
     sigma_navigation_m: float = Field(3.0, gt=0, description="error of a fix, one sigma per axis")
     sigma_layback_m: float = Field(10.0, ge=0, description="error of the layback, one sigma")
 
@@ -235,7 +259,9 @@ class Position(Section):
 class MainField(Section):
     """IGRF-14 at the sensor."""
 
-    tolerance_nt: float = Field(0.002, ge=0.001, le=1, description="largest departure from exact synthesis that is allowed")
+    tolerance_nt: float = Field(
+        0.002, ge=0.001, le=1, description="largest departure from exact synthesis that is allowed"
+    )
 
 
 class Diurnal(Section):
@@ -251,20 +277,30 @@ class Diurnal(Section):
     longest_gap_s: float = Field(900.0, ge=0, description="longest gap in a station's record that is bridged")
     local_time_shift: bool = Field(True, description="shift the slow part to the ship's local solar time")
     slow_period_h: float = Field(5.0, gt=0, le=24, description="periods longer than this are the slow part")
-    combine: Literal["distance", "plane", "nearest"] = Field("distance", description="how several stations are combined")
+    combine: Literal["distance", "plane", "nearest"] = Field(
+        "distance", description="how several stations are combined"
+    )
     chord_min: float = Field(10.0, gt=0, le=180, description="disturbance: length of the chord")
-    disturbed_nt: float = Field(5.0, gt=0, description="disturbance: departure from the chord (common practice: a few nT)")
+    disturbed_nt: float = Field(
+        5.0, gt=0, description="disturbance: departure from the chord (common practice: a few nT)"
+    )
     sigma_at_base_nt: float = Field(0.5, ge=0, description="error of the term near the station, one sigma")
-    sigma_nt_per_100km: float = Field(1.0, ge=0, description="growth of that error with distance, where it cannot be estimated")
+    sigma_nt_per_100km: float = Field(
+        1.0, ge=0, description="growth of that error with distance, where it cannot be estimated"
+    )
 
 
 class Heading(Section):
     """Effect of the ship's and the sensor's heading."""
 
-    use: Literal["calibration", "none"] = Field("calibration", description="estimate from calibration lines, or leave out")
+    use: Literal["calibration", "none"] = Field(
+        "calibration", description="estimate from calibration lines, or leave out"
+    )
     angle: Literal["ship_heading", "tow_direction"] = Field("ship_heading", description="the angle of the harmonics")
     significance: float = Field(0.01, gt=0, lt=1, description="F-test level at which a harmonic is applied")
-    widest_gap_deg: float = Field(100.0, gt=0, le=360, description="not fitted where headings leave a wider gap in the circle")
+    widest_gap_deg: float = Field(
+        100.0, gt=0, le=360, description="not fitted where headings leave a wider gap in the circle"
+    )
 
 
 class Crossovers(Section):
@@ -279,18 +315,26 @@ class Crossovers(Section):
 class Levelling(Section):
     """Adjustment of the lines to each other at their crossings."""
 
-    model: Literal["constant", "drift"] = Field("constant", description="correction of a line: constant, or with drift in time")
+    model: Literal["constant", "drift"] = Field(
+        "constant", description="correction of a line: constant, or with drift in time"
+    )
     knots_h: float = Field(3.0, gt=0, description="drift: time between the knots")
     robust: bool = Field(True, description="weigh down and then reject crossings that do not fit")
-    hold: list[str] = Field([], description="lines whose correction is held at zero; empty: weighted mean zero per network")
+    hold: list[str] = Field(
+        [], description="lines whose correction is held at zero; empty: weighted mean zero per network"
+    )
 
 
 class Profiles(Section):
     """The product: one profile a line."""
 
     kinds: list[Kind] = Field(["line", "tie"], min_length=1, description="kinds of line that get a profile")
-    azimuth_deg: float | None = Field(None, ge=0, lt=360, description="azimuth to project on; without it each line's own best-fit one")
-    increasing_towards_deg: float = Field(90.0, ge=0, lt=360, description="distance grows towards this azimuth, whatever way the ship ran")
+    azimuth_deg: float | None = Field(
+        None, ge=0, lt=360, description="azimuth to project on; without it each line's own best-fit one"
+    )
+    increasing_towards_deg: float = Field(
+        90.0, ge=0, lt=360, description="distance grows towards this azimuth, whatever way the ship ran"
+    )
     spacing_km: float = Field(0.1, gt=0, le=50, description="spacing of the even samples")
     longest_gap_km: float = Field(0.5, gt=0, description="gaps longer than this stay gaps")
 
@@ -298,7 +342,9 @@ class Profiles(Section):
 class Report(Section):
     """Summary and figures."""
 
-    exaggeration_nt_per_km: float | None = Field(None, gt=0, description="scale of the stacked profiles; without it chosen to fit")
+    exaggeration_nt_per_km: float | None = Field(
+        None, gt=0, description="scale of the stacked profiles; without it chosen to fit"
+    )
 
 
 class Single(Section):

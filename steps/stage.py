@@ -117,8 +117,11 @@ class Job:
             os.replace(temporary, final)
         self._ready = []
         who = self.survey.get("key", "")
-        print(f"{self.name:<11} {who + ': ' if who else ''}{self.record.get('done', 'done')} "
-              f"({time.monotonic() - self._start:.1f} s)", flush=True)
+        print(
+            f"{self.name:<11} {who + ': ' if who else ''}{self.record.get('done', 'done')} "
+            f"({time.monotonic() - self._start:.1f} s)",
+            flush=True,
+        )
 
     def abandon(self) -> None:
         """Remove what was half written."""
@@ -183,8 +186,11 @@ def run(main) -> None:
     except OSError as error:
         job.abandon()
         where = error.filename or "a file"
-        print(f"{where}: cannot be read or written. {error.strerror}. Mend that and run again; "
-              "raw files and former results are untouched.", file=sys.stderr)
+        print(
+            f"{where}: cannot be read or written. {error.strerror}. Mend that and run again; "
+            "raw files and former results are untouched.",
+            file=sys.stderr,
+        )
         sys.exit(1)
     except BaseException:
         job.abandon()
