@@ -5,11 +5,9 @@ before any work, and every mistake is told at once with its line.
 """
 
 from datetime import datetime
-from pathlib import Path
 from typing import Annotated, Literal
 
 from pydantic import BaseModel, ConfigDict, Field, model_validator
-
 
 FILE = "survey.yaml"
 
@@ -218,7 +216,7 @@ class Layback(Section):
 
     model: Literal["pursuit", "same_track", "astern", "none"] = Field(
         "pursuit",
-        description="pursuit curve of the tow point; same track, that far back; straight astern; none: sensor at the antenna",
+        description="pursuit curve of the tow point; same track, so far back; straight astern; none: at the antenna",
     )
     log: str | None = Field(None, description="cable log, CSV: time_utc, cable_out_m; steps in time")
     cable_out_m: float | None = Field(None, ge=0, le=5000, description="constant cable-out, where there is no log")

@@ -4,9 +4,10 @@ A stage module ends with ``if __name__ == "__main__": stage.run(main)`` where ``
 Snakefile calls ``python -m steps.<stage> --<input> PATH... --write PATH... --options JSON``.
 """
 
-import argparse
+import glob
 import json
 import os
+import shutil
 import sys
 import tempfile
 import time
@@ -51,9 +52,17 @@ class Job:
             "edits": self.edits,
             "notes": [],
         }
-        self._outputs = {path.stem: path for path in outputs}
+        # A joint stage writes tables of the same name for several members: reduced/<member>/<name>.parquet
+        self._outputs = {}
+        for path in outputs:
+            self._outputs[path.stem] = path
+            self._outputs[f"{path.parent.name}/{path.stem}"] = path
+        self._finals = list(outputs)
         self._ready: list[tuple[Path, Path]] = []
         self._start = time.monotonic()
+        for final in outputs:  # what a killed run left half written
+            for stale in final.parent.glob(f".{glob.escape(final.stem)}-*{glob.escape(final.suffix)}"):
+                _discard(stale)
 
     def path(self, name: str) -> Path:
         """Return the only file of input `name`."""
@@ -69,9 +78,9 @@ class Job:
         self.record["notes"].append(sentence)
         print(f"{self.name}: note: {sentence}", flush=True)
 
-    def target(self, name: str) -> Path:
+    def target(self, name: str, member: str | None = None) -> Path:
         """Return a temporary path for output `name`; it takes its final name when the stage ends well."""
-        final = self._outputs[name]
+        final = self._outputs[f"{member}/{name}" if member else name]
         final.parent.mkdir(parents=True, exist_ok=True)
         if final.suffix:
             handle, text = tempfile.mkstemp(prefix=f".{final.stem}-", suffix=final.suffix, dir=final.parent)
@@ -83,11 +92,14 @@ class Job:
         self._ready.append((Path(text), final))
         return Path(text)
 
-    def write(self, name: str, table: pd.DataFrame) -> None:
-        """Write one Parquet table, checked against the vocabulary where `name` is a table of it."""
+    def write(self, name: str, table: pd.DataFrame, member: str | None = None) -> None:
+        """Write one Parquet table, checked against the vocabulary where `name` is a table of it.
+
+        A joint stage writes one table for each of its surveys, and names the `member`.
+        """
         if name in columns.TABLES:
             table = columns.check(table, name)
-        table.to_parquet(self.target(name), index=False, compression="zstd")
+        table.to_parquet(self.target(name, member), index=False, compression="zstd")
 
     def write_json(self, name: str, content: dict) -> None:
         """Write one JSON file with sorted keys."""
@@ -103,17 +115,14 @@ class Job:
 
     def finish(self) -> None:
         """Write the record, give every output its final name and print the stage's line."""
-        if self.name in self._outputs and self._outputs.get(self.name).suffix == ".json":
-            self.write_json(self.name, self.record)
-        elif f"{self.name}_record" in self._outputs:
-            self.write_json(f"{self.name}_record", self.record)
+        self.write_json(f"{self.name}_record", self.record)
         written = {final for _, final in self._ready}
-        forgotten = [str(path) for path in self._outputs.values() if path not in written]
+        forgotten = [str(path) for path in self._finals if path not in written]
         if forgotten:
             raise KeyError(f"stage {self.name} did not write {forgotten}")
         for temporary, final in self._ready:
-            if final.is_dir() and not final.is_symlink():
-                _remove_tree(final)
+            if final.is_dir():
+                shutil.rmtree(final)
             os.replace(temporary, final)
         self._ready = []
         who = self.survey.get("key", "")
@@ -126,16 +135,14 @@ class Job:
     def abandon(self) -> None:
         """Remove what was half written."""
         for temporary, _ in self._ready:
-            if temporary.is_dir():
-                _remove_tree(temporary)
-            else:
-                temporary.unlink(missing_ok=True)
+            _discard(temporary)
 
 
-def _remove_tree(folder: Path) -> None:
-    import shutil
-
-    shutil.rmtree(folder)
+def _discard(path: Path) -> None:
+    if path.is_dir() and not path.is_symlink():
+        shutil.rmtree(path)
+    else:
+        path.unlink(missing_ok=True)
 
 
 def _umask() -> int:
@@ -146,21 +153,15 @@ def _umask() -> int:
 
 def _arguments(words: list[str]) -> tuple[dict, list[Path], dict]:
     """Read ``--name PATH...`` inputs, ``--write PATH...`` outputs and ``--options JSON``."""
-    parser = argparse.ArgumentParser(allow_abbrev=False)
-    parser.add_argument("--write", nargs="+", type=Path, required=True)
-    parser.add_argument("--options", required=True)
-    known, rest = parser.parse_known_args(words)
-    inputs: dict[str, list[Path]] = {}
-    name = None
-    for word in rest:
+    groups: dict[str, list[str]] = {}
+    for word in words:
         if word.startswith("--"):
-            name = word[2:]
-            inputs.setdefault(name, [])
-        elif name is None:
-            parser.error(f"unexpected {word}")
+            group = groups.setdefault(word[2:], [])
         else:
-            inputs[name].append(Path(word))
-    return inputs, known.write, json.loads(known.options)
+            group.append(word)
+    (options,) = groups.pop("options")
+    outputs = [Path(word) for word in groups.pop("write")]
+    return {name: [Path(word) for word in found] for name, found in groups.items()}, outputs, json.loads(options)
 
 
 def run(main) -> None:

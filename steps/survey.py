@@ -5,6 +5,7 @@ The Snakefile calls `load` before any work and asks the result which files and o
 
 import difflib
 import re
+import shlex
 import unicodedata
 from dataclasses import dataclass, field
 from pathlib import Path, PurePosixPath
@@ -20,6 +21,7 @@ from steps.formats import tables
 
 LARGEST_SETTINGS_BYTES = 1_000_000
 RESERVED = {"logs"}
+HEADED = {"profiles", "dating"}
 
 
 def slug(name: str, longest: int = 60) -> str:
@@ -65,6 +67,11 @@ class Member:
             return {f"base_{n}": self.files(station.files) for n, station in enumerate(own.diurnal.base_stations)}
         return {}
 
+    def raw_arguments(self, stage: str) -> str:
+        """Return `raw_inputs` as words of a command line: ``--name FILE...`` for each input."""
+        words = [word for name, files in self.raw_inputs(stage).items() for word in (f"--{name}", *files)]
+        return shlex.join(words)
+
 
 @dataclass(frozen=True)
 class Run:
@@ -94,7 +101,8 @@ class Run:
             member = self.members[key]
             content = {
                 "settings": getattr(member.settings, stage).model_dump(mode="json"),
-                "survey": {"key": key, "folder": str(member.folder), **member.settings.survey.model_dump(mode="json")},
+                # Only what writes headers is told who measured: a corrected ship's name reruns nothing else.
+                "survey": {"key": key, **(_who(member) if stage in HEADED else {})},
                 "edits": edits.for_stage(member.edits, stage),
             }
             tables = {name: files for name, files in member.raw_inputs(stage).items() if name in ("log", "cable")}
@@ -102,6 +110,11 @@ class Run:
                 content["tables"] = {name: provenance.checksum(file) for name, (file,) in tables.items()}
         content["code"] = provenance.fingerprint(stage)
         return provenance.to_json(content)
+
+
+def _who(member: Member) -> dict:
+    """Return the texts for the headers of products."""
+    return member.settings.survey.model_dump(mode="json")
 
 
 def load(file: str = settings.FILE) -> Run:
@@ -229,7 +242,7 @@ def _plain(value: object) -> object:
 
 
 def _inside(pattern: str) -> bool:
-    """Tell whether a path or pattern stays inside the folder by its own wording; links made by the user are followed."""
+    """Tell whether a path or pattern, as written, stays inside the folder; links that the user made are followed."""
     path = PurePosixPath(pattern)
     return bool(pattern.strip()) and not path.is_absolute() and ".." not in path.parts and "\0" not in pattern
 
@@ -238,10 +251,8 @@ def _matches(folder: Path, pattern: str, folders: bool = False) -> list[str]:
     """List what matches a pattern in a folder, as relative paths; an exact name needs no pattern characters."""
     if not _inside(pattern):
         return []
-    if (folder / pattern).exists():
-        found = [folder / pattern]
-    else:
-        found = sorted(folder.glob(pattern))
+    exact = folder / pattern  # a name may itself hold pattern characters
+    found = [exact] if exact.exists() else sorted(folder.glob(pattern))
     return [path.relative_to(folder).as_posix() for path in found if (path.is_dir() if folders else path.is_file())]
 
 
@@ -265,7 +276,7 @@ def _read_yaml(file: str) -> tuple[dict, dict]:
         text = Path(file).read_text(encoding="utf-8-sig")
         yaml = YAML(typ="rt", pure=True)
         if any(isinstance(event, AliasEvent) for event in yaml.parse(text)):
-            raise SurveyError(mistake(file, "must not use YAML aliases (*name)", None, "Write the value out."))
+            raise SurveyError(mistake(file, "must not use YAML aliases (*name)", remedy="Write the value out."))
         tree = YAML(typ="rt", pure=True).load(text)
     except UnicodeDecodeError as error:
         raise SurveyError(
