@@ -191,5 +191,7 @@ def find_line(edit: dict, line_names: list[str]) -> int:
 
 def _unknown(edit: dict, what: str, wanted: str, names: list[str]) -> None:
     near = difflib.get_close_matches(wanted, names, n=1)
-    remedy = f"Did you mean {near[0]}?" if near else "Correct the target, or remove the row."
+    remedy = (
+        f"Did you mean {near[0]}?" if near else f"Known here: {', '.join(names[:12])}{', ...' * (len(names) > 12)}."
+    )
     raise SurveyError(mistake(where(edit), f"must name a {what} of this survey", wanted, remedy))
