@@ -74,6 +74,7 @@ def fingerprint(stage: str) -> str:
         path = _module_path(module)
         digest.update(module.encode())
         digest.update(ast.dump(ast.parse(path.read_bytes())).encode())
-        for data in sorted(path.parent.glob(f"{path.stem}_*.csv")):
-            digest.update(data.read_bytes())
+        for data in sorted(path.parent.glob(f"{path.stem}_*")):  # its tables and templates
+            if data.suffix in (".csv", ".html"):
+                digest.update(data.read_bytes())
     return digest.hexdigest()[:16]

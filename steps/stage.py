@@ -55,7 +55,7 @@ class Job:
         # A joint stage writes tables of the same name for several members: reduced/<member>/<name>.parquet
         self._outputs = {}
         for path in outputs:
-            self._outputs[path.stem] = path
+            self._outputs[path.stem] = self._outputs[path.name] = path
             self._outputs[f"{path.parent.name}/{path.stem}"] = path
         self._finals = list(outputs)
         self._ready: list[tuple[Path, Path]] = []
