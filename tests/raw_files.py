@@ -202,7 +202,7 @@ def iaga_text(base: dict, code: str, *, source: str = "Simulated", comments: tup
     values = np.where(np.isnan(total)[:, None], 99999.0, np.column_stack([total[:, None] * unit, total]))
     rows = np.array(
         [
-            f"{when} " + "".join(f" {value:9.2f}" for value in row) + "\n"
+            f"{when}" + "".join(f" {value:9.2f}" for value in row) + "\n"
             for when, row in zip(times.strftime("%Y-%m-%d %H:%M:%S.000 %j   "), values.tolist(), strict=True)
         ],
         dtype=object,

@@ -102,6 +102,7 @@ class Scenario:
     layer_thickness_m: float = 500.0
     transition_km: float = 1.0
     bend_km: float = 1.5
+    along_strike: float = 0.15  # how much the strength varies along the ridge
     seamounts: int = 4
     seamount_nt: float = 150.0
     rough_nt: float = 8.0
@@ -172,6 +173,17 @@ class Survey:
     crust: Crust | None = None
     main: MainField | None = None
     plane: Plane | None = None
+
+    def anomaly_at(self, latitude_deg, longitude_deg, depth_m) -> np.ndarray:
+        """Return the true anomaly in nT wherever a reduction says that the sensor was; NaN stays NaN."""
+        return self.crust(*self.plane.metres(np.asarray(latitude_deg), np.asarray(longitude_deg)), np.asarray(depth_m))
+
+    def anomaly_error(self, anomaly_nt, latitude_deg, longitude_deg, depth_m, where) -> np.ndarray:
+        """Return the errors in nT of readings `where`, taken at the claimed positions, their mean (datum) removed."""
+        where = np.asarray(where, bool)
+        there = (np.asarray(column)[where] for column in (latitude_deg, longitude_deg, depth_m))
+        error = np.asarray(anomaly_nt)[where] - self.anomaly_at(*there)
+        return error - error.mean()
 
 
 # -- the survey ------------------------------------------------------------------------------------------------------

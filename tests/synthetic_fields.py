@@ -177,7 +177,7 @@ class Crust:
                 self._odd * (np.arctan(d / z1) - np.arctan(d / z2))
                 + self._even * 0.5 * np.log((d * d + z2 * z2) / (d * d + z1 * z1))
             )
-        total *= MU0_OVER_2PI * (1 + 0.15 * np.sin(2 * np.pi * y / 45e3 + p[1]))
+        total *= MU0_OVER_2PI * (1 + s.along_strike * np.sin(2 * np.pi * y / 45e3 + p[1]))
         for mount_x, mount_y, mount_z, peak in self._mounts:
             e = east - (mount_x * self._across[0] + mount_y * self._along[0])
             n = north - (mount_x * self._across[1] + mount_y * self._along[1])
@@ -197,7 +197,7 @@ def wander(rng, span_s: float, tau_s: float):
     """Draw a smooth process of unit variance and correlation time tau, as a function of seconds after the start."""
     knots = np.arange(-4, int(np.ceil(span_s / tau_s)) + 5) * tau_s
     spline = CubicSpline(knots, rng.standard_normal(len(knots)))
-    return lambda t: spline(np.clip(t, knots[0], knots[-1])) / 0.87  # 0.87: rms between and at the knots
+    return lambda t: spline(np.clip(t, knots[0], knots[-1])) / 0.91  # 0.91: rms at and between the knots
 
 
 def markov(rng, n: int, step_s: float, tau_s: float) -> np.ndarray:
