@@ -11,6 +11,8 @@ import ppigrf
 from synthetic import Survey
 from synthetic_fields import decimal_year
 
+CODES = ("XB1", "XB2", "XB3", "XB4")  # of invented stations
+
 
 @dataclass(frozen=True)
 class Style:
@@ -215,12 +217,54 @@ def iaga_text(base: dict, code: str, *, source: str = "Simulated", comments: tup
     }
 
 
+def settings(survey: Survey, style: Style | None = None, *, sigma_layback_m: float = 5.0) -> dict:
+    """Return the settings that a processor would state for a survey written by `write`, by section.
+
+    Stated is what the ship knows: the stated part of the clock error, the logged cable, the size of a fix's error.
+    """
+    s, ending = survey.scenario, ".gz" if (style or Style()).compress else ""
+    clock = {"offset_s": s.clock_offset_s}
+    if s.clock_drift_s_per_day:
+        clock |= {"drift_s_per_day": s.clock_drift_s_per_day, "reference": s.start}
+    return {
+        "survey": {"name": f"Simulated {s.seed}"},
+        "ingest": {
+            "readings": {
+                "format": "delimited",
+                "files": [f"raw/magnetometer/mag_*.txt{ending}"],
+                "delimiter": ";",
+                "skip_rows": len((style or Style()).header),
+                "time": {"columns": ["Date", "Time"], "layout": "%d/%m/%Y %H:%M:%S.%f"},
+                "columns": {"total_field_nt": "Mag_nT", "signal": "Signal", "logged_depth_m": "Depth_m"},
+                "clock": clock,
+            },
+            "navigation": [{"format": "nmea", "files": [f"raw/navigation/nav_*.nmea{ending}"]}],
+        },
+        "lines": {"log": "lines.csv"},
+        "screen": {"lowest_signal": 500.0},
+        "position": {
+            "antenna_to_tow_point": {"forward_m": s.forward_m, "starboard_m": s.starboard_m},
+            "layback": {"log": "cable.csv"},
+            "sea_surface_height_m": s.sea_surface_height_m,
+            "sigma_navigation_m": round(float(np.hypot(s.fix_noise_m, s.fix_wander_m)), 2),
+            "sigma_layback_m": sigma_layback_m,
+        },
+        "diurnal": {
+            "base_stations": [
+                {"format": "iaga2002", "files": [f"raw/base_station/{code.lower()}*{ending}"], "name": base["name"]}
+                for code, base in zip(CODES, survey.bases, strict=False)
+            ]
+        },
+        "heading": {"use": "calibration" if s.calibration else "none"},
+    }
+
+
 def write(
     survey: Survey,
     folder: Path,
     style: Style | None = None,
     *,
-    codes: tuple[str, ...] = ("XB1", "XB2", "XB3", "XB4"),
+    codes: tuple[str, ...] = CODES,
     comments: tuple[str, ...] = (),
 ) -> list[Path]:
     """Write all raw files and tables of a survey (not its settings) and return their paths."""

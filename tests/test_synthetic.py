@@ -379,6 +379,17 @@ def test_the_same_survey_gives_the_same_bytes(small, tmp_path):
     assert [p.read_bytes() for p in one] == [p.read_bytes() for p in two]
 
 
+def test_a_simulated_survey_s_settings_are_valid(small, tmp_path):
+    from steps.settings import Single
+
+    paths = raw_files.write(small, tmp_path)
+    stated = Single.model_validate(raw_files.settings(small))
+    patterns = [*stated.ingest.readings.files, *stated.ingest.navigation[0].files]
+    patterns += [pattern for base in stated.diurnal.base_stations for pattern in base.files]
+    found = {path for pattern in [*patterns, stated.lines.log, "cable.csv"] for path in tmp_path.glob(pattern)}
+    assert found == set(paths)
+
+
 def test_the_demo_is_small_enough_to_carry():
     raw = [p for p in (ROOT / "demo_survey" / "raw").rglob("*") if p.is_file()]
     assert len(raw) > 10
