@@ -75,6 +75,7 @@ WRONG_ROW, WRONG_CABLE_M = 2, 330.0
 
 STYLE = Style(
     seed=1906,
+    cut_short=True,
     header=("RV HALCYON DAWN (invented) - towed magnetometer, sensor 2", "time base: logger PC; units: counts; m; nT"),
 )
 

@@ -24,6 +24,7 @@ class Style:
     remarks: bool = True
     navigation_hours: float = 24.0
     bad_checksums: int = 40
+    cut_short: bool = False  # the last sentence, as when the power goes
     compress: bool = True
     header: tuple[str, ...] = ("Towed magnetometer, logger's own text", "Units: nT, m, counts")
 
@@ -163,6 +164,8 @@ def nmea_text(survey: Survey, style: Style) -> dict[str, str]:
         dtype=object,
     )
     number = ((stamp - stamp[0].astype("datetime64[D]")) / np.timedelta64(1, "h") // style.navigation_hours).astype(int)
+    if style.cut_short:
+        lines[-1] = lines[-1][:38]
     return {
         f"nav_{pd.Timestamp(stamp[number == k][0]).strftime('%Y%m%d_%H')}.nmea": "".join(lines[number == k])
         for k in np.unique(number)

@@ -229,7 +229,8 @@ class External:
         daily = -s.sq_nt * (1 + 0.12 * self._daily(time_s + self.margin_s)) * bell
         after = np.maximum(time_s - self.onset_s, 0.0) / 3600
         phase = (1 - np.exp(-after / 1.5)) * np.exp(-after / 9.0)
-        storm = -s.storm_nt * phase * (1 + 0.3 * self._quick(time_s + self.margin_s))
+        # at middle latitudes the total field sees less of the ring current than of bays and pulsations
+        storm = -s.storm_nt * phase * (0.4 + 0.3 * self._quick(time_s + self.margin_s))
         for centre, width, size in self.bays:
             storm = storm + size * s.storm_nt * np.exp(-0.5 * ((time_s - centre) / width) ** 2)
         return gain * (daily + storm + s.background_nt * self._background(time_s + self.margin_s))
