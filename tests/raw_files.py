@@ -165,7 +165,7 @@ def nmea_text(survey: Survey, style: Style) -> dict[str, str]:
     )
     number = ((stamp - stamp[0].astype("datetime64[D]")) / np.timedelta64(1, "h") // style.navigation_hours).astype(int)
     if style.cut_short:
-        lines[-1] = lines[-1][:38]
+        lines[-1] = lines[-1][:35]
     return {
         f"nav_{pd.Timestamp(stamp[number == k][0]).strftime('%Y%m%d_%H')}.nmea": "".join(lines[number == k])
         for k in np.unique(number)
