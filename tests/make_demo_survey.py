@@ -56,7 +56,7 @@ SCENARIO = Scenario(
         (6.0, 240.0, "passing ship"),
         (16.2, 50.0, "repeat"),
         (23.4, 240.0, "gap"),
-        (29.1, 60.0, "low signal"),
+        (29.7, 60.0, "low signal"),
     ),
     clock_offset_s=3.4,
     clock_drift_s_per_day=0.12,
