@@ -258,7 +258,7 @@ def simulate(scenario: Scenario) -> Survey:
     turned = np.radians(heading)
     tow_east = east + s.forward_m * np.sin(turned) + s.starboard_m * np.cos(turned)
     tow_north = north + s.forward_m * np.cos(turned) - s.starboard_m * np.sin(turned)
-    true_north = plane.true_north_deg(east, north)
+    true_north = np.degrees(np.unwrap(np.radians(plane.true_north_deg(east, north))))
 
     # lines and cable
     times = CubicSpline(distance, elapsed)(marks)
@@ -320,7 +320,7 @@ def simulate(scenario: Scenario) -> Survey:
             "sensor_depth_m": depth,
             "east_m": e,
             "north_m": n,
-            "tow_direction_deg": np.degrees(psi - convergence) % 360,
+            "tow_direction_deg": (np.degrees(psi) - plane.true_north_deg(e, n)) % 360,
             "ship_heading_deg": ship_heading,
             "layback_m": layback,
             "cable_out_m": cable_true,
@@ -420,7 +420,7 @@ def _navigation(s: Scenario, plane, start, time_s, antenna, heading, true_north,
     wild = rng.choice(n, s.wild_fixes, replace=False)
     noise[0][wild] += rng.choice([-1, 1], s.wild_fixes) * rng.uniform(1e3, 8e3, s.wild_fixes)
     latitude, longitude = plane.geographic(position[:, 0] + noise[0], position[:, 1] + noise[1])
-    north = np.interp(at, time_s, np.degrees(np.unwrap(np.radians(true_north))))
+    north = np.interp(at, time_s, true_north)
     gyro = np.interp(at, time_s, heading) - north + s.gyro_noise_deg * rng.standard_normal(n)
     given = np.ones(n, bool)
     for hours, seconds in s.navigation_gaps_h:

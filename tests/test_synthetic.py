@@ -114,13 +114,24 @@ def test_pursuit_on_a_straight_track_follows_the_closed_form():
     assert np.tan(phi / 2) == pytest.approx(np.tan(phi[0] / 2) * np.exp(-run / length), abs=2e-5)
 
 
-def test_the_sensor_is_one_layback_from_the_stern_and_the_ship_crabs():
-    s = replace(SMALL, yaw_deg=0.0, gyro_noise_deg=0.0, fix_noise_m=0.0, fix_wander_m=0.0, navigation_s=1.0)
+@pytest.mark.parametrize(("latitude", "longitude"), [(44.0, -28.0), (-75.0, 179.95), (89.7, 30.0)])
+def test_the_sensor_is_one_layback_from_the_stern_and_the_ship_crabs(latitude, longitude):
+    s = replace(
+        SMALL,
+        latitude_deg=latitude,
+        longitude_deg=longitude,
+        yaw_deg=0.0,
+        gyro_noise_deg=0.0,
+        fix_noise_m=0.0,
+        fix_wander_m=0.0,
+        navigation_s=1.0,
+    )
     survey = synthetic.simulate(s)
     fixes, truth = survey.navigation, survey.truth
     seconds = fixes["time_utc"].to_numpy().astype("int64")
     at = truth["time_utc"].to_numpy().astype("int64")
-    latitude, longitude = (np.interp(at, seconds, fixes[c]) for c in ("latitude_deg", "longitude_deg"))
+    where = survey.plane.metres(fixes["latitude_deg"].to_numpy(), fixes["longitude_deg"].to_numpy())
+    latitude, longitude = survey.plane.geographic(*(np.interp(at, seconds, column) for column in where))
     heading = truth["ship_heading_deg"].to_numpy()
     # geodesics by pyproj: forward (negative) along the heading, then to starboard
     longitude, latitude, _ = GEOD.fwd(longitude, latitude, heading, np.full(len(at), s.forward_m))
