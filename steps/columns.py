@@ -138,6 +138,16 @@ COLUMNS = {
     "mismatch_nt": Column("nT", "float64", "anomaly of the first pass minus that of the second"),
     "sigma_mismatch_nt": Column("nT", "float64", "one sigma of the mismatch, level left out"),
     "status": Column("1", "str", "used, or the reason why the crossing is not"),
+    # levelling, by crossing and by line
+    "residual_nt": Column("nT", "float64", "mismatch left after levelling; missing where the crossing is not used"),
+    "left_out_nt": Column("nT", "float64", "mismatch minus what all other crossings say of it"),
+    "weight": Column("1", "float64", "robust weight in levelling, 0 (rejected) to 1"),
+    "survey": Column("1", "str", "survey of the line"),
+    "network": Column("1", "int64", "number of the network that crossings connect, 0 the largest; -1 in none"),
+    "crossings": Column("1", "int64", "number of crossings used"),
+    "rms_before_nt": Column("nT", "float64", "rms mismatch of the line's crossings before levelling"),
+    "rms_after_nt": Column("nT", "float64", "rms mismatch of the line's crossings after levelling"),
+    "rms_left_out_nt": Column("nT", "float64", "the same with each crossing left out in turn"),
     # profiles
     "distance_km": Column("km", "float64", "geodesic distance along the profile's azimuth from its origin"),
     "offset_km": Column("km", "float64", "distance to the right of the profile's straight line"),
@@ -195,7 +205,21 @@ TABLES = {
         "status",
     ],
     "levelling": ["level_nt", "sigma_level_nt", "level_flags"],
+    "levelling_lines": [
+        "survey",
+        "line",
+        "kind",
+        "network",
+        "level_nt",
+        "sigma_level_nt",
+        "crossings",
+        "rms_before_nt",
+        "rms_after_nt",
+        "rms_left_out_nt",
+        "status",
+    ],
 }
+TABLES["levelling_crossovers"] = [*TABLES["crossovers"], "residual_nt", "left_out_nt", "weight"]
 
 
 def check(table: pd.DataFrame, name: str) -> pd.DataFrame:
