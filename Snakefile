@@ -306,6 +306,7 @@ rule report:  # all surveys together
         base=each("diurnal_base.parquet"),
         crossovers="reduced/levelling_crossovers.parquet",
         levels="reduced/levelling_lines.parquet",
+        edits=RUN.edits_file(),
         records=[
             *each("ingest_record.json"),
             *each("lines_record.json"),
@@ -320,7 +321,8 @@ rule report:  # all surveys together
         ],
     output:
         "reduced/summary.txt",
-        "reduced/summary.html",
+        "reduced/report.html",
+        directory("reduced/figures"),
         "reduced/report_record.json",
     log:
         "reduced/logs/report.log",
@@ -329,5 +331,5 @@ rule report:  # all surveys together
     shell:
         "python -m steps.report --corrected {input.corrected} --profiles {input.profiles}"
         " --line_table {input.line_table} --base {input.base} --crossovers {input.crossovers}"
-        " --levels {input.levels} --records {input.records}"
+        " --levels {input.levels} --edits {input.edits:q} --records {input.records}"
         " --write {output} --options {params.options:q} 2> {log}"

@@ -4,6 +4,7 @@ Built with Bokeh, whose script is embedded in the page, so that it opens from a 
 is shown travels in the page, thinned by smallest and largest values so that no spike is lost.
 """
 
+import re
 from dataclasses import dataclass
 
 import numpy as np
@@ -188,13 +189,19 @@ def linked_view(columns: dict, tracks: list[Track], crossings: pd.DataFrame, edi
     view = column(
         map_view, row(chosen, column(Div(text="&nbsp;", height=8), row(before, after))), *panels, form, name="linked"
     )
-    script, division = components(view)
-    start = (
-        "<script>window.addEventListener('load', () => {let n = 0; const wait = setInterval(() => {"
-        + _START
-        + "}, 100)})</script>"
-    )
-    return script + start, division
+    script, division = _settled(*components(view))
+    start = "<script>window.addEventListener('load', () => {let n = 0; const wait = setInterval(() => {"
+    return script + start + _START + "}, 100)})</script>", division
+
+
+def _settled(*parts: str) -> list[str]:
+    """Replace the random names that Bokeh gives to documents and places by numbers: equal views are equal bytes."""
+    found = dict.fromkeys(name for part in parts for name in _RANDOM.findall(part))
+    names = {name: f"view-{number}" for number, name in enumerate(found, start=1)}
+    return [_RANDOM.sub(lambda match: names[match.group()], part) for part in parts]
+
+
+_RANDOM = re.compile(r"[0-9a-f]{8}-[0-9a-f]{4}-[0-9a-f]{4}-[0-9a-f]{4}-[0-9a-f]{12}")
 
 
 def resources() -> str:

@@ -10,10 +10,11 @@ import json
 from pathlib import Path
 
 import jinja2
+import markupsafe
 import numpy as np
 import pandas as pd
 
-from steps import __version__, figures, stage
+from steps import __version__, figures, history, page, provenance, stage
 from steps.columns import FLAG_MEANINGS, REJECTING, Flag
 
 CAUTIONS = (
@@ -159,13 +160,16 @@ def as_text(content: dict) -> str:
 
 
 def as_page(content: dict) -> str:
-    """Write the summary as one self-contained HTML page."""
-    template = (Path(__file__).parent / "report_summary.html").read_text(encoding="utf-8")
+    """Write the report as one self-contained HTML page."""
+    template = (Path(__file__).parent / "report_page.html").read_text(encoding="utf-8")
     environment = jinja2.Environment(
         autoescape=True, undefined=jinja2.StrictUndefined, trim_blocks=True, lstrip_blocks=True
     )
     environment.filters["number"] = number
-    return environment.from_string(template).render(**content, cautions=CAUTIONS)
+    script, division = (markupsafe.Markup(part) for part in content["view"])
+    script = markupsafe.Markup(page.resources()) + script if script else ""
+    parts = {**content, "script": script, "division": division, "cautions": CAUTIONS}
+    return environment.from_string(template).render(parts)
 
 
 def embed(figure) -> str:
@@ -175,78 +179,137 @@ def embed(figure) -> str:
     return "data:image/png;base64," + base64.b64encode(memory.getvalue()).decode("ascii")
 
 
-def draw(samples: pd.DataFrame, crossings: pd.DataFrame, base: pd.DataFrame, records: dict, settings) -> list[dict]:
-    """Draw the figures of the summary: a list of title, caption and image."""
+def draw(samples: pd.DataFrame, crossings: pd.DataFrame, base: pd.DataFrame, records: dict, settings) -> list[tuple]:
+    """Draw the figures: a list of file name, title, caption and matplotlib figure."""
     drawn = []
     good = samples["sensor_latitude_deg"].notna() & samples["sensor_longitude_deg"].notna()
     if good.any():
         plane = figures.Plane(samples["sensor_latitude_deg"].to_numpy(), samples["sensor_longitude_deg"].to_numpy())
-        drawn.append(
-            (
-                "Tracks and crossings",
-                "Where the sensor went; dots are crossings, crosses those not used.",
-                figures.track_map(samples, crossings, plane),
-            )
-        )
+        caption = "Where the sensor went; dots are crossings, crosses those not used."
+        drawn.append(("tracks", "Tracks and crossings", caption, figures.track_map(samples, crossings, plane)))
         if samples["anomaly_nt"].notna().any():
-            drawn.append(
-                (
-                    "Anomaly along the tracks",
-                    "Ties are left out of this figure.",
-                    figures.stacked_profiles(samples, plane, settings.exaggeration_nt_per_km),
-                )
-            )
+            figure = figures.stacked_profiles(samples, plane, settings.exaggeration_nt_per_km)
+            drawn.append(("anomaly", "Anomaly along the tracks", "Ties are left out of this figure.", figure))
     if len(crossings):
-        used = np.isfinite(crossings["residual_nt"].to_numpy(float))
-        drawn.append(
-            (
-                "Mismatch at crossings",
-                "Before and after levelling, and each compared with what the others say of it.",
-                figures.crossing_histogram(
-                    crossings["mismatch_nt"].to_numpy(float)[used],
-                    crossings["residual_nt"].to_numpy(float),
-                    crossings["left_out_nt"].to_numpy(float),
-                ),
-            )
-        )
+        left = crossings["residual_nt"].to_numpy(float)
+        before = crossings["mismatch_nt"].to_numpy(float)[np.isfinite(left)]
+        figure = figures.crossing_histogram(before, left, crossings["left_out_nt"].to_numpy(float))
+        caption = "Before and after levelling, and each compared with what the others say of it."
+        drawn.append(("crossings", "Mismatch at crossings", caption, figure))
     if len(base):
-        drawn.append(("Base stations", "Variation after the main field and the datum.", figures.base_record(base)))
+        caption = "Variation after the main field and the datum."
+        drawn.append(("base_stations", "Base stations", caption, figures.base_record(base)))
     for (key, name), record in records.items():
         fit = record.get("fit") if name == "heading" else None
         if fit and fit.get("angle_deg"):
-            drawn.append(
-                (
-                    f"Heading effect{' of ' + key if key else ''}",
-                    "Calibration readings and the fit that was applied.",
-                    figures.heading_fit(
-                        *(np.array(fit[k], float) for k in ("angle_deg", "residual_nt", "curve_deg", "curve_nt"))
-                    ),
-                )
+            parts = (np.array(fit[k], float) for k in ("angle_deg", "residual_nt", "curve_deg", "curve_nt"))
+            caption = "Calibration readings and the fit that was applied."
+            title = f"Heading effect, {key}" if len({k for k, _ in records}) > 2 else "Heading effect"
+            drawn.append((f"heading_{key}", title, caption, figures.heading_fit(*parts)))
+    return drawn
+
+
+def save_figures(folder: Path, drawn: list[tuple]) -> None:
+    """Write each figure as PNG and PDF for a cruise report; the same figure gives the same bytes."""
+    for name, _, _, figure in drawn:
+        figure.savefig(folder / f"{name}.png", dpi=200, metadata={"Software": None})
+        figure.savefig(folder / f"{name}.pdf", metadata={"CreationDate": None, "Producer": None, "Creator": None})
+
+
+def at_crossings(crossings: pd.DataFrame, corrected: dict[str, pd.DataFrame]) -> pd.DataFrame:
+    """Add the anomaly of either pass after all corrections: value_1_nt and value_2_nt."""
+    crossings = crossings.copy()
+    for side in ("1", "2"):
+        value = np.full(len(crossings), np.nan)
+        for key, table in corrected.items():
+            own = (crossings[f"survey_{side}"] == key).to_numpy()
+            good = table["anomaly_nt"].notna()
+            if own.any() and good.any():
+                time = table.loc[good, "time_utc"].to_numpy().astype(np.int64)
+                at = crossings.loc[own, f"time_{side}_utc"].to_numpy().astype("datetime64[ns]").astype(np.int64)
+                value[own] = np.interp(at, time, table.loc[good, "anomaly_nt"].to_numpy())
+        crossings[f"value_{side}_nt"] = value
+    return crossings
+
+
+def run_state(content: dict, records: dict, crossing_rms: dict) -> dict:
+    """Gather what the history keeps of a run."""
+    return {
+        "figures": {**crossing_rms, **{label: value for label, value in content["headline"] if "rms" not in label}},
+        "lines": {
+            provenance.to_json([row["survey"], row["line"]]): {"level_nt": _plain(row["level_nt"]), "kept": row["kept"]}
+            for row in content["lines"]
+        },
+        "settings": {f"{key}.{name}".strip("."): record["settings"] for (key, name), record in records.items()},
+        "edits": [
+            " ".join(
+                str(edit.get(k) or "")
+                for k in ("action", "target", "start_utc", "end_utc", "value", "reason", "by", "date")
             )
-    return [{"title": title, "caption": caption, "image": embed(figure)} for title, caption, figure in drawn]
+            for edit in content["edits"]
+        ],
+        "files": {file["file"]: file["sha256"] for file in content["files"]},
+        "code": {f"{key} {name}".strip(): record["code"] for (key, name), record in records.items()},
+    }
+
+
+def _plain(value: object) -> float | None:
+    return None if value is None or value != value else float(value)
+
+
+def raw_files(records: dict) -> list[dict]:
+    """List the raw files and tables that stages read, with their checksums, wherever a record holds one."""
+    found = {}
+
+    def search(node):
+        if isinstance(node, dict):
+            if "sha256" in node and "file" in node:
+                found[str(node["file"])] = node["sha256"]
+            else:
+                for inner in node.values():
+                    search(inner)
+        elif isinstance(node, list):
+            for inner in node:
+                search(inner)
+
+    for record in records.values():
+        search({name: value for name, value in record.items() if name != "settings"})
+    return [{"file": file, "sha256": digest} for file, digest in sorted(found.items())]
 
 
 def main(job: stage.Job) -> None:
-    """Read everything, write the summary as text and as a page."""
+    """Read everything; write the summary as text, the report as a page, and its figures."""
     keys = job.survey["members"]
     records = read_records(job.inputs["records"])
-    wanted = ["line_index", "anomaly_nt", "sigma_noise_nt", "flags"]
+    wanted = ["line_index", "time_utc", "sigma_noise_nt", "flags", *page.SHOWN.values()]
     corrected = {
-        key: pd.read_parquet(path, columns=wanted) for key, path in zip(keys, job.inputs["corrected"], strict=True)
+        k: pd.read_parquet(path, columns=wanted) for k, path in zip(keys, job.inputs["corrected"], strict=True)
     }
     tables = {key: pd.read_parquet(path) for key, path in zip(keys, job.inputs["line_table"], strict=True)}
-    samples = pd.concat(
-        [pd.read_parquet(path).assign(survey=key) for key, path in zip(keys, job.inputs["profiles"], strict=True)]
-    )
-    base = pd.concat([pd.read_parquet(path) for path in job.inputs["base"]])
-    crossings = job.table("crossovers")
-    levels = job.table("levels")
+    samples = [pd.read_parquet(path).assign(survey=key) for key, path in zip(keys, job.inputs["profiles"], strict=True)]
+    samples = pd.concat(samples, ignore_index=True)
+    base = pd.concat([pd.read_parquet(path) for path in job.inputs["base"]], ignore_index=True)
+    crossings = at_crossings(job.table("crossovers"), corrected)
     flags = np.concatenate([table["flags"].to_numpy() for table in corrected.values()])
     kept = sum(int(table["anomaly_nt"].notna().sum()) for table in corrected.values())
     used = np.isfinite(crossings["residual_nt"].to_numpy(float))
-    before, after = rms(crossings["mismatch_nt"][used]), rms(crossings["residual_nt"])
-    left_out = rms(crossings["left_out_nt"])
+    found = {
+        "crossing rms before levelling, nT": rms(crossings["mismatch_nt"][used]),
+        "crossing rms after levelling, nT": rms(crossings["residual_nt"]),
+        "crossing rms left out, nT": rms(crossings["left_out_nt"]),
+    }
+    before, after, left_out = found.values()
+    told = f"{number(before)} nT before levelling, {number(after)} nT after, {number(left_out)} nT left out"
     several = len(keys) > 1
+    ordered = sorted(
+        records.items(), key=lambda item: (keys.index(item[0][0]) if item[0][0] else -1, STAGES.index(item[0][1]))
+    )
+    ordered = sorted(ordered, key=lambda item: STAGES.index(item[0][1]))
+
+    def who(key: str, name: str) -> str:
+        return f"{name}, {key}" if several and key else name
+
+    drawn = draw(samples, crossings, base, records, job.settings)
     content = {
         "title": job.survey["name"],
         "version": __version__,
@@ -255,42 +318,42 @@ def main(job: stage.Job) -> None:
             ("Readings with an anomaly", number(kept)),
             ("Lines", number(sum(len(table) for table in tables.values()))),
             ("Crossings used", f"{number(int(used.sum()))} of {number(len(crossings))}"),
-            (
-                "Crossing mismatch, rms",
-                f"{number(before)} nT before levelling, {number(after)} nT after, {number(left_out)} nT left out",
-            ),
+            ("Crossing mismatch, rms", told),
         ],
-        "notes": [
-            (f"{name}, {key}" if several and key else name, sentence)
-            for (key, name), record in records.items()
-            for sentence in record["notes"]
-        ],
-        "done": [
-            (f"{name}, {key}" if several and key else name, record.get("done", ""))
-            for (key, name), record in sorted(records.items(), key=lambda item: STAGES.index(item[0][1]))
-        ],
+        "notes": [(who(*place), sentence) for place, record in ordered for sentence in record["notes"]],
+        "done": [(who(*place), record.get("done", "")) for place, record in ordered],
         "flags": flag_counts(flags),
-        "lines": line_rows(levels, tables, corrected),
+        "lines": line_rows(job.table("levels"), tables, corrected),
         "several": several,
-        "edits": [{"survey": key, **edit} for (key, _), record in records.items() for edit in record["edits"]],
-        "files": [
-            {"survey": key, "stage": name, **file}
-            for (key, name), record in records.items()
-            for file in record.get("files", [])
-        ],
+        "edits": [{"survey": key, **edit} for (key, _), record in ordered for edit in record["edits"]],
+        "files": raw_files(records),
         "settings": [
-            (
-                f"{name}, {key}" if several and key else name,
-                json.dumps(record["settings"], indent=1, sort_keys=True, ensure_ascii=False),
-            )
-            for (key, name), record in records.items()
+            (who(*place), json.dumps(record["settings"], indent=1, sort_keys=True, ensure_ascii=False))
+            for place, record in ordered
         ],
-        "figures": draw(samples, crossings, base, records, job.settings),
     }
+    state = run_state(content, records, found)
+    last = history.keep(job.output("report.html").parent / "history", state, samples)
+    changes = history.compare(last, state, samples) if last else None
+    columns, tracks = page.gather({key: (corrected[key], tables[key]) for key in keys})
+    view = page.linked_view(columns, tracks, crossings, _edits_text(job)) if tracks else ("", "")
+    images = [{"title": title, "caption": caption, "image": embed(figure)} for _, title, caption, figure in drawn]
     job.write_text("summary.txt", as_text(content))
-    job.write_text("summary.html", as_page(content))
-    job.record |= {"rms_before_nt": before, "rms_after_nt": after, "rms_left_out_nt": left_out}
-    job.done(f"crossing rms {number(before)} nT before levelling, {number(after)} nT after; see reduced/summary.html")
+    job.write_text("report.html", as_page({**content, "figures": images, "changes": changes, "view": view}))
+    save_figures(job.target("figures"), drawn)
+    job.record |= found
+    if changes and changes["figures"]:
+        what = [f"{name} {number(a)} -> {number(b)}" for name, a, b in changes["figures"] if "rms" in name]
+        if what:
+            print(f"against the run before: {'; '.join(what)}")
+    job.done(f"crossing rms {told}; look at reduced/report.html")
+
+
+def _edits_text(job: stage.Job) -> str:
+    """Return the edits file as it is, or its heading row; only for a single survey, which has one such file."""
+    if job.inputs.get("edits"):
+        return job.path("edits").read_text(encoding="utf-8-sig")
+    return ",".join(["action", "target", "start_utc", "end_utc", "value", "reason", "by", "date"]) + "\n"
 
 
 if __name__ == "__main__":

@@ -78,6 +78,10 @@ class Job:
         self.record["notes"].append(sentence)
         print(f"{self.name}: note: {sentence}", flush=True)
 
+    def output(self, name: str) -> Path:
+        """Return the final path of output `name`."""
+        return self._outputs[name]
+
     def target(self, name: str, member: str | None = None) -> Path:
         """Return a temporary path for output `name`; it takes its final name when the stage ends well."""
         final = self._outputs[f"{member}/{name}" if member else name]

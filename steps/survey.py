@@ -81,6 +81,11 @@ class Run:
     members: dict[str, Member]
     joint: dict[str, settings.Section]
 
+    def edits_file(self) -> list[str]:
+        """Return the edits file, for the report's form; several surveys have several, and the form has none."""
+        named = [member.path(member.settings.edits) for member in self.members.values() if member.settings.edits]
+        return named if len(self.members) == 1 else []
+
     def options(self, stage: str, key: str | None = None) -> str:
         """Return what a stage gets besides its files, as JSON with sorted keys; equal options give equal text."""
         if key is None:
