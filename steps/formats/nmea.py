@@ -4,9 +4,10 @@ GGA, GLL, RMC, VTG, ZDA and HDT of any talker are read; all else is skipped and 
 and worked on as arrays, without a loop over sentences: the exclusive-or of every sentence comes from one running
 exclusive-or over the file, and fields are read digit by digit for all sentences at once.
 
-Times. A fix carries its time of day; its date comes from the latest ZDA or RMC before it (the first one after it, at the
-start), else from the logger's stamp before the sentence; midnight is the half day that is nearer. VTG and HDT carry no
-time: they take the stamp of the logger, or where there is none the time of the latest timed sentence before them.
+Times. A fix carries its time of day; its date comes from the latest ZDA or RMC before it (the first one after it,
+at the start), else from the logger's stamp before the sentence; midnight is the half day that is nearer. VTG and HDT
+carry no time: they take the stamp of the logger, or where there is none the time of the latest timed sentence before
+them.
 """
 
 import gzip
