@@ -202,6 +202,7 @@ class Screen(Section):
     threshold: float = Field(6.0, gt=0, description="spike: departs from the running median by this many robust sigmas")
     smallest_spike_nt: float = Field(2.0, ge=0, description="no departure below this is a spike")
     longest_repeat: int = Field(10, ge=2, description="this many equal readings in a row are a dropout")
+    coarsest_s: float = Field(120.0, gt=0, description="no spike test where readings are further apart than this")
 
 
 class AntennaToTowPoint(Section):
