@@ -1,10 +1,10 @@
 """Screen single readings: spikes, dropouts, values out of range, low signal; noise of every line. Nothing is deleted.
 
 Spikes. A reading is a spike if it departs from the running median of its window by more than a number of robust sigmas
-(1.4826 times the median absolute deviation of the window's own departures; Hampel 1974, J. Am. Stat. Assoc. 69) and
-by more than a least amount. Departures from the running median, not the values themselves, are what the deviation is taken
-of, so that a steep anomaly, which a running median follows, does not hide a spike. The least amount is tested first: the
-deviation, which is costly, is worked out only where that test fails.
+(1.4826 times the median absolute deviation of the window's own departures; Hampel 1974, J. Am. Stat. Assoc. 69) and by
+more than a least amount. The deviation is that of departures from the running median, not of the values themselves, so
+that a steep anomaly, which a running median follows, hides no spike. The least amount is tested first: the deviation,
+which is costly, is worked out only where that test fails.
 
 Noise. For white noise the fourth difference has sqrt(70) times the standard deviation of the readings, while smooth
 anomalies all but vanish in it; its median absolute value is used, which spikes do not move.
@@ -291,8 +291,8 @@ def main(job: stage.Job) -> None:
     on_line = line_index >= 0
     if not (on_line & ~out).any():
         raise SurveyError(
-            f"screen: no reading on a line is kept; {int((out & on_line).sum())} are rejected. Look at screen.lowest_nt, "
-            "screen.highest_nt, screen.lowest_signal, the column of the total field in survey.yaml, and the edits."
+            f"screen: no reading on a line is kept; {int((out & on_line).sum())} are rejected. Look at "
+            "screen.lowest_nt, screen.highest_nt, screen.lowest_signal, the column of the total field, and the edits."
         )
     counts = {f.name.lower(): int(np.count_nonzero(flags & np.uint32(f))) for f in Flag if f & (AUTOMATIC | REJECTING)}
     ledger = {"readings": len(flags), "kept": int((~out).sum()), "rejected": int(out.sum())}
