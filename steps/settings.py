@@ -243,9 +243,6 @@ class Position(Section):
     sensor_depth_m: float | None = Field(
         None, ge=-500, le=6000, description="depth where none is logged; positive downwards"
     )
-    sea_surface_height_m: float = Field(
-        0.0, ge=-120, le=120, description="sea surface above the ellipsoid (geoid height), for the main field"
-    )
     fastest_ship_mps: float = Field(12.0, gt=0, le=60, description="navigation that needs more speed is dropped")
     longest_gap_s: float = Field(120.0, gt=0, description="longest gap in navigation that is bridged")
     smoothing_s: float = Field(
