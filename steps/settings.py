@@ -255,6 +255,9 @@ class Position(Section):
 class MainField(Section):
     """IGRF-14 at the sensor."""
 
+    sea_surface_height_m: float = Field(
+        0.0, ge=-120, le=120, description="sea surface above the ellipsoid at the survey (geoid height)"
+    )
     tolerance_nt: float = Field(
         0.002, ge=0.001, le=1, description="largest departure from exact synthesis that is allowed"
     )
