@@ -2,8 +2,8 @@
 
 Spikes. A reading is a spike if it departs from the robust line through its window (slope: median of the differences
 half a window apart; level: median) by more than a number of robust sigmas (1.4826 times the median absolute deviation
-from that line; Hampel 1974, J. Am. Stat. Assoc. 69) and by more than a least amount. The line keeps a steep anomaly from
-hiding a spike, and from being one. A running median, which costs little, finds the few readings that can fail at all;
+from that line; Hampel 1974, J. Am. Stat. Assoc. 69) and by more than a least amount. The line keeps a steep anomaly
+from hiding a spike, and from being one. A running median, which costs little, finds the few readings that can fail;
 the rest is worked out for those.
 
 Noise. For white noise the fourth difference has sqrt(70) times the standard deviation of the readings, while smooth
