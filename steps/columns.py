@@ -104,6 +104,10 @@ COLUMNS = {
     "sensor_speed_mps": Column("m s-1", "float64", "speed of the sensor over ground"),
     "sigma_position_m": Column("m", "float64", "horizontal position error of the sensor, one sigma per axis"),
     "position_flags": Column("1", "uint32", "flags set while locating the sensor"),
+    # base stations
+    "station": Column("1", "str", "name of the base station"),
+    "variation_nt": Column("nT", "float64", "total field at the station - main field - datum"),
+    "disturbed": Column("1", "bool", "magnetically disturbed"),
     # corrections and their uncertainties
     "main_field_nt": Column("nT", "float64", "IGRF-14 total field at sensor position, depth and time; subtracted"),
     "diurnal_nt": Column("nT", "float64", "external field variation; subtracted"),
@@ -196,6 +200,7 @@ TABLES = {
     ],
     "main_field": ["main_field_nt"],
     "diurnal": ["diurnal_nt", "sigma_diurnal_nt", "diurnal_flags"],
+    "diurnal_base": ["station", "time_utc", "variation_nt", "disturbed"],
     "heading": ["heading_nt", "sigma_heading_nt", "heading_flags"],
     "crossovers": [
         *_PASS,
