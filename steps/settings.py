@@ -300,6 +300,7 @@ class Heading(Section):
     widest_gap_deg: float = Field(
         100.0, gt=0, le=360, description="not fitted where headings leave a wider gap in the circle"
     )
+    sigma_leg_nt: float = Field(0.5, ge=0, description="error of a whole calibration leg, one sigma, as lines have it")
 
 
 class Crossovers(Section):
