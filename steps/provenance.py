@@ -4,6 +4,7 @@ import ast
 import functools
 import hashlib
 import json
+from collections.abc import Iterable
 from pathlib import Path
 
 _PACKAGE = Path(__file__).parent
@@ -78,3 +79,23 @@ def fingerprint(stage: str) -> str:
             if data.suffix in (".csv", ".html"):
                 digest.update(data.read_bytes())
     return digest.hexdigest()[:16]
+
+
+def raw_files(records: Iterable[dict]) -> list[dict]:
+    """List the raw files and tables that stages read, with their checksums, wherever a record holds one."""
+    found = {}
+
+    def search(node):
+        if isinstance(node, dict):
+            if "sha256" in node and "file" in node:
+                found[str(node["file"])] = node["sha256"]
+            else:
+                for inner in node.values():
+                    search(inner)
+        elif isinstance(node, list):
+            for inner in node:
+                search(inner)
+
+    for record in records:
+        search({name: value for name, value in record.items() if name != "settings"})
+    return [{"file": file, "sha256": digest} for file, digest in sorted(found.items())]

@@ -257,26 +257,6 @@ def _plain(value: object) -> float | None:
     return None if value is None or value != value else float(value)
 
 
-def raw_files(records: dict) -> list[dict]:
-    """List the raw files and tables that stages read, with their checksums, wherever a record holds one."""
-    found = {}
-
-    def search(node):
-        if isinstance(node, dict):
-            if "sha256" in node and "file" in node:
-                found[str(node["file"])] = node["sha256"]
-            else:
-                for inner in node.values():
-                    search(inner)
-        elif isinstance(node, list):
-            for inner in node:
-                search(inner)
-
-    for record in records.values():
-        search({name: value for name, value in record.items() if name != "settings"})
-    return [{"file": file, "sha256": digest} for file, digest in sorted(found.items())]
-
-
 def main(job: stage.Job) -> None:
     """Read everything; write the summary as text, the report as a page, and its figures."""
     keys = job.survey["members"]
@@ -326,7 +306,7 @@ def main(job: stage.Job) -> None:
         "lines": line_rows(job.table("levels"), tables, corrected),
         "several": several,
         "edits": [{"survey": key, **edit} for (key, _), record in ordered for edit in record["edits"]],
-        "files": raw_files(records),
+        "files": provenance.raw_files(records.values()),
         "settings": [
             (who(*place), json.dumps(record["settings"], indent=1, sort_keys=True, ensure_ascii=False))
             for place, record in ordered
