@@ -347,7 +347,7 @@ def _at(station: Station, time_s, lon, settings):
 
 
 def _plane(kept, lat, lon, otherwise):
-    """Fit a plane in position through the stations' values at every instant; `otherwise` where there is none."""
+    """Fit a plane in position to the stations at every instant; `otherwise` where that cannot be done."""
     s = np.zeros((3, 3, len(lat)))
     b = np.zeros((3, len(lat)))
     for station, w, value in kept:

@@ -403,8 +403,8 @@ def _record(job, fit) -> None:
         job.record |= {name: fit[name] for name in ("difference_nt", "sigma_difference_nt", "axis_deg")}
         job.note(
             "calibration on two opposite headings determines one number only, the difference between them: "
-            f"{fit['difference_nt']:.2f} nT with sigma {fit['sigma_difference_nt']:.2f} nT; on other headings the effect "
-            "is a guess from it."
+            f"{fit['difference_nt']:.2f} nT with sigma {fit['sigma_difference_nt']:.2f} nT; on other headings the "
+            "effect is a guess from it."
         )
         job.done(f"difference of two headings {fit['difference_nt']:.2f} nT from {fit['legs']} legs")
         return

@@ -1,8 +1,8 @@
 """Make the product: every reading with its corrections, and one evenly spaced profile a line.
 
 A line's readings are projected on a great circle: the line's own best fit, or one of stated azimuth through the middle
-of the survey (not for lines, such as ties, that run more than 45 degrees off it). Distance is geodesic (WGS 84) along it
-and grows in a stated sense, whatever way the ship ran. Even samples come from a linear-phase low-pass filter (Kaiser
+of the survey (not for lines, such as ties, that run more than 45 degrees off it). Distance is geodesic (WGS 84) along
+it and grows in a stated sense, whatever way the ship ran. Even samples come from a linear-phase low-pass filter (Kaiser
 window; Kaiser & Schafer 1980, IEEE Trans. ASSP 28) that lets half the new Nyquist wavenumber through and nothing beyond
 it; every term passes the same filter over the same readings, so that
 
