@@ -328,7 +328,7 @@ def predict(
 
 
 def _at(station: Station, time_s, lon, settings):
-    """Return a station's variation shifted to the ship's local time, the margin to a gap, and whether it is disturbed."""
+    """Return a station's variation at the ship's local time, the margin to a gap, and whether it is disturbed."""
     step = station.time_s[1] - station.time_s[0]
     place = (time_s - station.time_s[0]) / step
     tick = np.clip(place.astype(np.int64), 0, len(station.time_s) - 2)
