@@ -299,6 +299,11 @@ def _angles(column, missing, spec, text, where, name, quantity) -> np.ndarray:
             must = f"must be degrees such as 51.5042 or 51 30.25 {positive}"
             raise SurveyError(mistake(f"{where} row {text.rows[k]}, {name}", must, cells[k].as_py())) from None
         degrees, minutes, seconds = (pd.to_numeric(parts[part]).fillna(0).to_numpy() for part in ("d", "m", "s"))
+        good = (minutes < 60) & (seconds < 60)
+        if not good.all():
+            k = int(np.flatnonzero(~good)[0])
+            place = f"{where} row {text.rows[k]}, {name}"
+            raise SurveyError(mistake(place, "must have minutes and seconds below 60", cells[k].as_py()))
         letter = (parts["a"].fillna("") + parts["b"].fillna("")).str.upper()
         south = (letter == negative).to_numpy() ^ (parts["sign"] == "-").to_numpy()
         values = (degrees + minutes / 60 + seconds / 3600) * np.where(south, -1.0, 1.0)
