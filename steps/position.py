@@ -99,7 +99,7 @@ def smooth(values: np.ndarray, sigma: float) -> np.ndarray:
 
     """
     n = values.shape[-1]
-    half = min(int(np.ceil(5 * sigma)), n - 1)
+    half = min(int(np.ceil(6 * sigma)), n - 1)
     if sigma < 0.3 or half < 1:
         return values
     from scipy.signal import oaconvolve

@@ -3,7 +3,7 @@
 Spikes. A reading is a spike if it departs from the robust line through its window (slope: median of the differences
 half a window apart; level: median) by more than a number of robust sigmas (1.4826 times the median absolute deviation
 from that line; Hampel 1974, J. Am. Stat. Assoc. 69) and by more than a least amount. The line keeps a steep anomaly
-from hiding a spike, and from being one. A running median, which costs little, finds the few readings that can fail;
+from hiding a spike, and from being one. Running medians, which cost little, find the few readings that can fail;
 the rest is worked out for those.
 
 Noise. For white noise the fourth difference has sqrt(70) times the standard deviation of the readings, while smooth
@@ -53,7 +53,7 @@ def segments(time_utc: np.ndarray, good: np.ndarray) -> list[np.ndarray]:
 
 
 def running_median(values: np.ndarray, window: int) -> np.ndarray:
-    """Return the running median of a run, its ends extended by point reflection so that a slope goes on.
+    """Return the running median of a run; beyond its ends the end values stand.
 
     Parameters
     ----------
@@ -69,12 +69,7 @@ def running_median(values: np.ndarray, window: int) -> np.ndarray:
     """
     from scipy.ndimage import median_filter
 
-    half = min(window // 2, len(values) - 1)
-    before = 2 * values[0] - values[half:0:-1]
-    after = 2 * values[-1] - values[-2 : -half - 2 : -1]
-    return median_filter(np.concatenate([before, values, after]), size=window, mode="nearest")[
-        half : half + len(values)
-    ]
+    return median_filter(values, size=window, mode="nearest")
 
 
 def find_spikes(values: np.ndarray, *, window: int, threshold: float, smallest: float) -> np.ndarray:
@@ -100,28 +95,29 @@ def find_spikes(values: np.ndarray, *, window: int, threshold: float, smallest: 
     spikes = np.zeros(len(values), bool)
     if len(values) < window:
         return spikes
-    # A spike of the window pulls the running median along a slope: half the least amount lets none through.
-    candidates = np.flatnonzero(np.abs(values - running_median(values, window)) > smallest / 2)
+    # On a steep slope a burst pulls the running median along with it, but it has an edge: both are looked for.
+    from scipy.ndimage import maximum_filter1d
+
     half = window // 2
-    views = sliding_window_view(_extended(values, half), window)
+    step = np.diff(values)
+    edge = np.abs(step - running_median(step, window)) > smallest / 2
+    suspect = np.abs(values - running_median(values, window)) > smallest / 2
+    suspect |= maximum_filter1d(np.append(edge, False) | np.append(False, edge), window)
+    suspect[:half] = suspect[-half:] = True  # what lies beyond the ends is not known
+    candidates = np.flatnonzero(suspect)
+    views = sliding_window_view(values, window)
     along = np.arange(window) - half
     for start in range(0, len(candidates), CANDIDATES_AT_ONCE):
         some = candidates[start : start + CANDIDATES_AT_ONCE]
-        around = views[some]
+        first = np.clip(some - half, 0, len(values) - window)  # near the ends the window lies to one side
+        around = views[first]
         slope = np.median(around[:, half:] - around[:, : window - half], axis=1) / half
         around = around - slope[:, None] * along
         around -= np.median(around, axis=1)[:, None]
         deviation = np.median(np.abs(around), axis=1)
-        departure = np.abs(around[:, half])
+        departure = np.abs(around[np.arange(len(some)), some - first])
         spikes[some] = (departure > threshold * TO_SIGMA * deviation) & (departure > smallest)
     return spikes
-
-
-def _extended(values: np.ndarray, half: int) -> np.ndarray:
-    """Extend a run at both ends by point reflection, so that a slope goes on."""
-    before = 2 * values[0] - values[half:0:-1]
-    after = 2 * values[-1] - values[-2 : -half - 2 : -1]
-    return np.concatenate([before, values, after])
 
 
 def find_repeats(values: np.ndarray, longest: int) -> np.ndarray:
