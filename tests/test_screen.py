@@ -49,7 +49,7 @@ def test_spikes_are_those_of_the_definition():
     assert found.sum() > 100
 
 
-@pytest.mark.parametrize("length", [1, 2, 3, 4])
+@pytest.mark.parametrize("length", [1, 2, 3])  # up to a fifth of the window
 def test_bursts_on_a_slope_are_found_and_nothing_else(length):
     value = _sea_floor(4000) + RNG.normal(0, 0.1, 4000)
     planted = np.zeros(4000, bool)
