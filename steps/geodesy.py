@@ -113,3 +113,20 @@ def convergence(lat, lon) -> np.ndarray:
     dlon = np.radians((np.diff(lon) + 180.0) % 360.0 - 180.0)
     middle = np.radians((lat[1:] + lat[:-1]) / 2)
     return np.concatenate([[0.0], np.cumsum(dlon * np.sin(middle))])
+
+
+def path_length(lat, lon) -> np.ndarray:
+    """Return the distance run along a track since its first position, metres, in straight pieces.
+
+    Parameters
+    ----------
+    lat, lon : array of float, shape (n,)
+        Degrees.
+
+    Returns
+    -------
+    array of float, shape (n,)
+
+    """
+    vectors = to_vectors(lat, lon)
+    return np.concatenate([[0.0], np.cumsum(np.linalg.norm(np.diff(vectors, axis=1), axis=0))])

@@ -506,7 +506,7 @@ def main(job: stage.Job) -> None:
             distance = distance - distance.min()
             lat_0, lon_0 = lat[np.argmin(distance)], lon[np.argmin(distance)]
         columns["distance_km"][good], columns["offset_km"][good] = distance, offset
-        path = _path(lat, lon)
+        path = geodesy.path_length(lat, lon)
         slope = gradient(path, table["anomaly_nt"].to_numpy()[good])
         columns["sigma_position_nt"][good] = np.abs(slope) * table["sigma_position_m"].to_numpy()[good]
         geometry[number] = {
@@ -558,12 +558,6 @@ def _common_origin(table, index, wanted, placed):
         table["sensor_latitude_deg"].to_numpy()[chosen], table["sensor_longitude_deg"].to_numpy()[chosen]
     ).sum(axis=1)
     return _degrees(middle / np.linalg.norm(middle))
-
-
-def _path(lat, lon) -> np.ndarray:
-    """Return the distance run along a track, metres."""
-    vectors = geodesy.to_vectors(lat, lon)
-    return np.concatenate([[0.0], np.cumsum(np.linalg.norm(np.diff(vectors, axis=1), axis=0))])
 
 
 def _provenance(records: dict) -> dict:
