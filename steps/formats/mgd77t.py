@@ -470,8 +470,11 @@ def as_header(table: pd.DataFrame, survey_id: str, fields: dict[str, str] | None
         known["MAG_SRATE"] = f"{np.median(np.diff(np.sort(time))) / np.timedelta64(1, 's'):g}"
     if placed.any():
         west, east = longitude_span(lon[placed])
-        edges = {"LAT_TOP": lat[placed].max(), "LAT_BOTTOM": lat[placed].min(), "LON_LEFT": west, "LON_RIGHT": east}
-        known |= {name: f"{edge:.2f}" for name, edge in edges.items()}
+        # hundredths of a degree, rounded outwards so that the box holds every position
+        low = {"LAT_BOTTOM": lat[placed].min(), "LON_LEFT": west}
+        high = {"LAT_TOP": lat[placed].max(), "LON_RIGHT": east}
+        known |= {name: f"{np.floor(round(100 * edge, 4)) / 100 + 0.0:.2f}" for name, edge in low.items()}
+        known |= {name: f"{np.ceil(round(100 * edge, 4)) / 100 + 0.0:.2f}" for name, edge in high.items()}
         codes = ten_degree_codes(lat[placed], lon[placed])
         known |= {"IDS_10_NUM": str(len(codes)), "IDS_10DEG": ",".join([*codes, "9999"])}
     said = (
