@@ -326,7 +326,7 @@ def test_the_header_names_the_reference_field_and_the_extent(tmp_path, corrected
     assert (header["M_REFFL_CO"], header["MAG_REFFLD"]) == ("88", "IGRF-14")
     assert (header["FORMAT_77"], header["PARAMS_CO"], header["SURVEY_ID"]) == ("MGD77T", "55000", "X1")
     assert (header["LON_LEFT"], header["LON_RIGHT"]) == ("179.90", "-179.90")
-    assert (header["IDS_10_NUM"], header["IDS_10DEG"]) == ("4", "1017,3017,5017,7017,9999")
+    assert (header["IDS_10_NUM"], header["IDS_10DEG"]) == ("2", "3017,7017,9999")  # SE to NW
     assert (header["DATE_DEP"], header["DATE_ARR"]) == ("20240228", "20240229")
     assert (header["INST_SRC"], header["PLATFORM"]) == ("An Institute", "R/V Example")
     assert header["ADD_DOC"].startswith("Two lines. LAT and LON are of the towed magnetic sensor.")
