@@ -23,6 +23,8 @@ from steps.settings import Layback, Position
 
 COARSEST_CLOCK_S, FINEST_CLOCK_S = 10.0, 0.2
 SETTLED = 0.05  # share of the unknown first direction of the cable that may be left
+SLACK_M = 10.0  # what a good fix may be off
+MOST_TAKEN_BACK = 30  # fixes before a jump that may be the bad ones
 STRETCHES = 4096  # worked on side by side in the scan
 NS_PER_S = 1e9
 
@@ -34,8 +36,9 @@ def gate_fixes(time_s: np.ndarray, vectors: np.ndarray, fastest_mps: float) -> n
     """Tell which fixes fit together at a possible speed.
 
     The record is cut wherever a step needs more than the fastest speed. From the longest stretch outwards, each further
-    stretch is taken if it can be reached in time from the last one taken: single bad fixes, runs of them, and a bad
-    first fix are left out.
+    stretch is taken if it can be reached in time from the last fix taken. If it cannot, the fewest fixes are left out:
+    the whole stretch, its first ones, or the last ones taken before. So single bad fixes, runs of them, a bad first fix
+    and a bad last fix before a jump are left out, and no more.
 
     Parameters
     ----------
@@ -56,26 +59,31 @@ def gate_fixes(time_s: np.ndarray, vectors: np.ndarray, fastest_mps: float) -> n
     if n < 2:
         return np.ones(n, bool)
 
-    def reachable(i, j):
-        return np.linalg.norm(vectors[:, i] - vectors[:, j]) <= fastest_mps * abs(time_s[i] - time_s[j]) + 10.0
+    def reachable(one, many):
+        away = np.linalg.norm(vectors[:, many] - vectors[:, [one]], axis=0)
+        return away <= fastest_mps * np.abs(time_s[many] - time_s[one]) + SLACK_M
 
     step = np.linalg.norm(np.diff(vectors, axis=1), axis=0)
-    jump = np.flatnonzero(step > fastest_mps * np.diff(time_s) + 10.0)  # 10 m: what a good fix may be off
-    starts = np.concatenate([[0], jump + 1])
-    ends = np.concatenate([jump, [n - 1]])
+    jump = np.flatnonzero(step > fastest_mps * np.diff(time_s) + SLACK_M)
+    stretches = np.split(np.arange(n), jump + 1)
+    longest = int(np.argmax([len(stretch) for stretch in stretches]))
     keep = np.zeros(n, bool)
-    longest = int(np.argmax(ends - starts))
-    keep[starts[longest] : ends[longest] + 1] = True
-    last = ends[longest]
-    for k in range(longest + 1, len(starts)):
-        if reachable(last, starts[k]):
-            keep[starts[k] : ends[k] + 1] = True
-            last = ends[k]
-    last = starts[longest]
-    for k in range(longest - 1, -1, -1):
-        if reachable(last, ends[k]):
-            keep[starts[k] : ends[k] + 1] = True
-            last = starts[k]
+    keep[stretches[longest]] = True
+    own = stretches[longest].tolist()
+    before = [stretch[::-1] for stretch in stretches[:longest][::-1]]
+    for taken, outwards in ((own[-MOST_TAKEN_BACK:], stretches[longest + 1 :]), (own[MOST_TAKEN_BACK::-1], before)):
+        for stretch in outwards:
+            from_last = reachable(taken[-1], stretch)
+            first = int(np.argmax(from_last)) if from_last.any() else len(stretch)
+            if first:
+                back = np.flatnonzero(reachable(stretch[0], np.array(taken)))
+                undo = len(taken) - 1 - int(back[-1]) if len(back) else len(stretch) + 1
+                if undo < min(first, len(stretch)):
+                    keep[taken[len(taken) - undo :]] = False
+                    del taken[len(taken) - undo :]
+                    first = 0
+            keep[stretch[first:]] = True
+            taken = [*taken, *stretch[first:].tolist()][-MOST_TAKEN_BACK:]
     return keep
 
 
