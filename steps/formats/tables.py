@@ -6,8 +6,6 @@ mistakes of a file are told together, by row of the file.
 
 import csv
 import difflib
-import gzip
-import io
 import re
 from pathlib import Path
 
@@ -15,12 +13,14 @@ import numpy as np
 import pandas as pd
 
 from steps.errors import SurveyError, mistake
+from steps.formats.packed import read_bytes
 
 LARGEST_BYTES = 20_000_000
 MOST_MISTAKES = 10
-KINDS = ("text", "number", "time")
+YEARS = (1900, 2200)  # of any time that is read; datetime64[ns] itself ends in 2262
 _TIME = re.compile(
-    r"(\d{4}-\d{2}-\d{2})(?:[T ](\d{2}):(\d{2})(?::(\d{2})(\.\d{1,9})?)?)?\s*(Z|UTC|[+-]\d{2}:?\d{2})?", re.IGNORECASE
+    r"(\d{4}-\d{2}-\d{2})(?:[T ](\d{2}):(\d{2})(?::(\d{2})(?:[.,](\d{1,9}))?)?)?\s*(Z|UTC|[+-]\d{2}:?\d{2})?",
+    re.IGNORECASE | re.ASCII,
 )
 
 
@@ -50,18 +50,24 @@ def parse_time(text: str) -> np.datetime64:
     day, hour, minute, second, fraction, zone = found.groups()
     hour, minute, second = int(hour or 0), int(minute or 0), int(second or 0)
     leap = (hour, minute, second) == (23, 59, 60)
-    if not leap and (second > 59 or minute > 59 or hour > 24 or (hour == 24 and (minute or second or fraction))):
+    late = hour == 24 and not (minute or second or int(fraction or 0))
+    if not leap and not late and (second > 59 or minute > 59 or hour > 23):
         raise ValueError("must be a time of a day, 00:00:00 to 24:00:00")
+    if not YEARS[0] <= int(day[:4]) < YEARS[1]:
+        raise ValueError(f"must be a year from {YEARS[0]} to {YEARS[1] - 1}")
     try:
         time = np.datetime64(day, "ns")
     except ValueError:
         raise ValueError("must be a day of the calendar") from None
     time += np.timedelta64(((hour * 60 + minute) * 60 + second) * 1_000_000_000, "ns")
     if fraction and not leap:
-        time += np.timedelta64(int(fraction[1:].ljust(9, "0")), "ns")
+        time += np.timedelta64(int(fraction.ljust(9, "0")), "ns")
     if zone and zone[0] in "+-":
-        ahead = int(zone[1:3]) * 60 + int(zone[-2:])
-        time -= np.timedelta64(ahead if zone[0] == "+" else -ahead, "m")
+        hours, minutes = int(zone[1:3]), int(zone[-2:])
+        if hours > 14 or minutes > 59:
+            raise ValueError("must be an offset from UTC of at most 14:00 hours")
+        ahead = np.timedelta64(hours * 60 + minutes, "m")
+        time = time - ahead if zone[0] == "+" else time + ahead
     return time
 
 
@@ -127,11 +133,7 @@ def read_table(
             cells[column].append(
                 _cell(given.get(column, ""), kind, column in columns, f"{name} row {row}, {column}", wrong)
             )
-    if wrong:
-        more = (
-            [f"{name}: {len(wrong) - MOST_MISTAKES} more mistakes of this kind."] if len(wrong) > MOST_MISTAKES else []
-        )
-        raise SurveyError(*wrong[:MOST_MISTAKES], *more)
+    _tell(wrong, name)
     table = {}
     for column, kind in wanted.items():
         dtype = {"text": object, "number": np.float64, "time": "datetime64[ns]"}[kind]
@@ -141,16 +143,7 @@ def read_table(
 
 def _rows(path: Path, name: str) -> list[tuple[int, list[str]]]:
     """Split a file into rows of stripped cells, without comments and blank rows."""
-    with open(path, "rb") as raw:
-        data = raw.read(LARGEST_BYTES + 1)
-    if data[:2] == b"\x1f\x8b":
-        try:
-            with gzip.open(io.BytesIO(data)) as packed:
-                data = packed.read(LARGEST_BYTES + 1)
-        except (OSError, EOFError) as error:
-            raise SurveyError(mistake(name, "must be a whole gzip file", error)) from error
-    if len(data) > LARGEST_BYTES:
-        raise SurveyError(mistake(name, f"must be a table of under {LARGEST_BYTES // 1_000_000} MB", "a larger file"))
+    data = read_bytes(path, name, LARGEST_BYTES)
     if b"\0" in data:
         raise SurveyError(mistake(name, "must be text", "a binary file", "Save it as CSV, UTF-8."))
     try:
@@ -163,13 +156,15 @@ def _rows(path: Path, name: str) -> list[tuple[int, list[str]]]:
             )
         ) from error
     rows = []
-    for number, line in enumerate(text.splitlines(), start=1):
+    for number, line in enumerate(text.replace("\r\n", "\n").replace("\r", "\n").split("\n"), start=1):
         if not line.strip() or line.lstrip().startswith("#"):
             continue
         try:
             (cells,) = csv.reader([line], skipinitialspace=True, strict=True)
         except (csv.Error, ValueError) as error:
-            raise SurveyError(mistake(f"{name} row {number}", "must be a row of CSV", error)) from error
+            raise SurveyError(
+                mistake(f"{name} row {number}", "must be one row of CSV, with every quote closed", line)
+            ) from error
         cells = [cell.strip() for cell in cells]
         if any(cells):
             rows.append((number, cells))
@@ -182,18 +177,32 @@ def _check_heading(heading: list[str], columns: dict, wanted: dict, where: str) 
     unknown = [cell for cell in heading if cell and cell not in wanted]
     for column in columns:
         if column not in heading:
-            near = difflib.get_close_matches(column, unknown, n=1)
-            remedy = f"Rename {near[0]}." if near else "Is the delimiter a comma?" if len(heading) == 1 else ""
+            near = nearest(column, unknown)
+            remedy = f"Rename {near}." if near else "Is the delimiter a comma?" if len(heading) == 1 else ""
             wrong.append(mistake(where, f"must have a column {column}", ", ".join(heading), remedy))
     for cell in unknown:
-        near = difflib.get_close_matches(cell, wanted, n=1)
-        remedy = f"Did you mean {near[0]}?" if near else f"Known here: {', '.join(wanted)}."
+        near = nearest(cell, [*wanted])
+        remedy = f"Did you mean {near}?" if near else f"Known here: {', '.join(wanted)}."
         wrong.append(mistake(where, "must have only known columns", cell, remedy))
     wrong.extend(
         mistake(where, "must name each column once", cell)
         for cell in dict.fromkeys(heading)
         if cell and heading.count(cell) > 1
     )
+    _tell(wrong, where)
+
+
+def nearest(name: str, known: list[str]) -> str | None:
+    """Return the known name that is most like `name`, whatever the case of its letters; None if none is."""
+    lower = {each.lower(): each for each in reversed(known)}
+    near = difflib.get_close_matches(name.lower(), lower, n=1)
+    return lower[near[0]] if near else None
+
+
+def _tell(wrong: list[str], name: str) -> None:
+    """Raise the sentences, of many the first ones; do nothing where there are none."""
+    if len(wrong) > MOST_MISTAKES:
+        wrong = [*wrong[:MOST_MISTAKES], f"{name}: and {len(wrong) - MOST_MISTAKES} more."]
     if wrong:
         raise SurveyError(*wrong)
 
