@@ -309,7 +309,12 @@ class Crossovers(Section):
     kinds: list[Kind] = Field(["line", "tie"], min_length=1, description="kinds of line whose crossings are used")
     smallest_angle_deg: float = Field(15.0, ge=0, lt=90, description="crossings at smaller angles are listed, not used")
     longest_gap_s: float = Field(60.0, gt=0, description="no crossing is taken inside a longer gap")
-    gradient_window_m: float = Field(500.0, gt=0, description="length over which the along-track gradient is fitted")
+    shortest_loop_km: float = Field(
+        10.0, ge=0, description="a line's crossing with itself after a shorter way is a turn, no observation"
+    )
+    gradient_window_m: float = Field(
+        500.0, gt=0, description="length over which value and along-track gradient are fitted"
+    )
 
 
 class Levelling(Section):
