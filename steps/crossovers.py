@@ -254,7 +254,10 @@ def statistics(table: pd.DataFrame) -> dict:
         | {"mismatch_nt": np.concatenate([mismatch, -mismatch])}
     )
     one, two = used["survey_1"].to_numpy(str), used["survey_2"].to_numpy(str)
-    pairs = pd.DataFrame({"survey_1": np.minimum(one, two), "survey_2": np.maximum(one, two), "mismatch_nt": mismatch})
+    swap = one > two
+    pairs = pd.DataFrame(
+        {"survey_1": np.where(swap, two, one), "survey_2": np.where(swap, one, two), "mismatch_nt": mismatch}
+    )
     listed = _groups(pairs, ["survey_1", "survey_2"])
     return {
         "crossings": len(table),
