@@ -70,6 +70,7 @@ rule all:
         "reduced/crossovers_record.json",
         "reduced/levelling_record.json",
         each("profiles_record.json"),
+        each("exports_record.json"),
         "reduced/report_record.json",
 
 
@@ -242,7 +243,10 @@ rule levelling:  # all surveys together
         position=each("position.parquet"),
         diurnal=each("diurnal.parquet"),
         heading=each("heading.parquet"),
+        main_field=each("main_field.parquet"),
+        screen=each("screen.parquet"),
         heading_record=each("heading_record.json"),
+        position_record=each("position_record.json"),
     output:
         each("levelling.parquet"),
         "reduced/levelling_lines.parquet",
@@ -256,7 +260,8 @@ rule levelling:  # all surveys together
     shell:
         "python -m steps.levelling --crossovers {input.crossovers} --readings {input.readings} --lines {input.lines}"
         " --line_table {input.line_table} --position {input.position} --diurnal {input.diurnal}"
-        " --heading {input.heading} --heading_record {input.heading_record}"
+        " --heading {input.heading} --main_field {input.main_field} --screen {input.screen}"
+        " --heading_record {input.heading_record} --position_record {input.position_record}"
         " --write {output} --options {params.options:q} 2> {log}"
 
 
@@ -296,6 +301,29 @@ rule profiles:
         " --screen {input.screen} --position {input.position} --main_field {input.main_field}"
         " --diurnal {input.diurnal} --heading {input.heading} --levelling {input.levelling}"
         " --records {input.records} --write {output} --options {params.options:q} 2> {log}"
+
+
+rule exports:
+    input:
+        corrected="reduced/{survey}/corrected.parquet",
+        profiles="reduced/{survey}/profiles.parquet",
+        line_table="reduced/{survey}/line_table.parquet",
+        crossovers="reduced/levelling_crossovers.parquet",
+        profiles_record="reduced/{survey}/profiles_record.json",
+    output:
+        "reduced/{survey}/{survey}.nc",
+        "reduced/{survey}/{survey}.gpkg",
+        "reduced/{survey}/{survey}.m77t",
+        "reduced/{survey}/{survey}.h77t",
+        "reduced/{survey}/exports_record.json",
+    log:
+        "reduced/logs/{survey}/exports.log",
+    params:
+        options=options("exports"),
+    shell:
+        "python -m steps.exports --corrected {input.corrected} --profiles {input.profiles}"
+        " --line_table {input.line_table} --crossovers {input.crossovers} --profiles_record {input.profiles_record}"
+        " --write {output} --options {params.options:q} 2> {log}"
 
 
 rule report:  # all surveys together

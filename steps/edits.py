@@ -119,6 +119,12 @@ def where(edit: dict) -> str:
     return f"{edit['file']} row {edit['row']}, {edit['action']}"
 
 
+def as_text(edit: dict) -> str:
+    """Write an edit in one line, for headers and records."""
+    keys = ("action", "target", "start_utc", "end_utc", "value", "reason", "by", "date")
+    return "; ".join(f"{key} {edit[key]}" for key in keys if edit.get(key))
+
+
 def select(
     edit: dict,
     time_utc: np.ndarray,

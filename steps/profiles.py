@@ -22,6 +22,7 @@ import pandas as pd
 
 from steps import geodesy, main_field, provenance, stage
 from steps.columns import COLUMNS, REJECTING, Flag
+from steps.edits import as_text as edit_text
 from steps.settings import Profiles
 
 TERMS = ("main_field_nt", "diurnal_nt", "heading_nt", "level_nt")
@@ -457,9 +458,9 @@ def csv_header(line: str, kind: str, about: dict, where: dict, absent: dict[str,
         "# anomaly = total field - main field - diurnal - heading - level; every correction is subtracted",
         *(f"# absent in the whole survey: {term} ({plain(reason)})" for term, reason in absent.items()),
         "# datum: common to all lines that crossings connect; not determined by the survey itself",
-        *(f"# software: {plain(text)}" for text in about["software"]),
+        f"# software: {about['software']}",
         *(f"# input: {plain(file['file'])} sha256 {file['sha256']}" for file in about["inputs"]),
-        *(f"# edit: {plain(edit)}" for edit in about["edits"]),
+        *(f"# edit: {plain(edit_text(edit))}" for edit in about["edits"]),
         "# Not for navigation. No clearance of the sea bed.",
     ]
     return [row.replace("\x00", "") for row in rows]
@@ -516,7 +517,8 @@ def main(job: stage.Job) -> None:
         }
     table = table.assign(**columns)
     table["sigma_anomaly_nt"] = total_sigma(table)
-    about = {**job.survey, **_provenance(records)}
+    job.record["provenance"] = _provenance(records)
+    about = {**job.survey, **job.record["provenance"]}
     folder = job.target("csv")
     files = file_names(lines["line"].tolist())
     for number in np.flatnonzero(wanted):
@@ -564,12 +566,10 @@ def _provenance(records: dict) -> dict:
     """Gather what made the products: software, inputs and edits."""
     from steps import __version__
 
-    edits = [edit for record in records.values() for edit in record["edits"]]
-    keys = ("action", "target", "start_utc", "end_utc", "value", "reason", "by", "date")
     return {
-        "software": [f"Stripeline {__version__}; " + " ".join(f"{r['stage']} {r['code']}" for r in records.values())],
+        "software": f"Stripeline {__version__}; " + " ".join(f"{r['stage']} {r['code']}" for r in records.values()),
         "inputs": provenance.raw_files(records.values()),
-        "edits": ["; ".join(f"{key} {edit[key]}" for key in keys if edit.get(key)) for edit in edits],
+        "edits": [edit for record in records.values() for edit in record["edits"]],
     }
 
 

@@ -14,7 +14,7 @@ import markupsafe
 import numpy as np
 import pandas as pd
 
-from steps import __version__, figures, history, page, provenance, stage
+from steps import __version__, edits, figures, history, page, provenance, stage
 from steps.columns import FLAG_MEANINGS, REJECTING, Flag
 
 CAUTIONS = (
@@ -241,13 +241,7 @@ def run_state(content: dict, records: dict, crossing_rms: dict) -> dict:
             for row in content["lines"]
         },
         "settings": {f"{key}.{name}".strip("."): record["settings"] for (key, name), record in records.items()},
-        "edits": [
-            " ".join(
-                str(edit.get(k) or "")
-                for k in ("action", "target", "start_utc", "end_utc", "value", "reason", "by", "date")
-            )
-            for edit in content["edits"]
-        ],
+        "edits": [edits.as_text(edit) for edit in content["edits"]],
         "files": {file["file"]: file["sha256"] for file in content["files"]},
         "code": {f"{key} {name}".strip(): record["code"] for (key, name), record in records.items()},
     }

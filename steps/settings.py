@@ -344,6 +344,10 @@ class Profiles(Section):
     longest_gap_km: float = Field(0.5, gt=0, description="gaps longer than this stay gaps")
 
 
+class Exports(Section):
+    """Open formats for others; it has no settings."""
+
+
 class Report(Section):
     """Summary and figures."""
 
@@ -366,6 +370,7 @@ class Single(Section):
     crossovers: Crossovers = Crossovers()
     levelling: Levelling = Levelling()
     profiles: Profiles = Profiles()
+    exports: Exports = Exports()
     report: Report = Report()
     edits: str | None = Field(None, description="edits file, CSV written by a person")
 
@@ -391,6 +396,7 @@ SECTIONS = {
     "crossovers": Crossovers,
     "levelling": Levelling,
     "profiles": Profiles,
+    "exports": Exports,
     "report": Report,
 }
 

@@ -21,7 +21,7 @@ from steps.formats import tables
 
 LARGEST_SETTINGS_BYTES = 1_000_000
 RESERVED = {"logs"}
-HEADED = {"profiles", "dating"}
+HEADED = {"profiles", "exports", "dating"}
 
 
 def slug(name: str, longest: int = 60) -> str:
