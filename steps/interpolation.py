@@ -4,7 +4,8 @@ The value is that of a parabola fitted to the readings about the place, over a w
 scatter about it more than their noise allows (chi-squared, one-sided 5 %), the window is halved, up to four times.
 Where no window serves, as where readings are far apart, the value is that of the cubic through the four nearest
 readings, and what their fourth differences show beyond the noise is added to its sigma: an undersampled quantity cannot
-be interpolated better. The gradient is the slope of a straight line over the whole window.
+be interpolated better. The gradient is that of the parabola over the whole window, or of a straight line through fewer
+than six readings.
 """
 
 import numpy as np
@@ -148,8 +149,8 @@ def _parabola(s, v, use):
     Returns
     -------
     number, value, factor, slope, scatter : array, shape (p,)
-        Readings used; the parabola at 0; the factor from the variance of a reading to its; the slope of the straight
-        line; the sum of squares about the parabola.
+        Readings used; the parabola at 0; the factor from the variance of a reading to its; its slope at 0, or that of a
+        straight line for few readings; the sum of squares about the parabola.
 
     """
     number = use.sum(axis=0)
@@ -169,7 +170,8 @@ def _parabola(s, v, use):
         one_0, two_0 = -middle, middle**2 + tilt * middle - mean_2
         scatter = total((v - c_0 - c_1 * one - c_2 * two) ** 2)
         factor = 1 / number + one_0**2 / square_1 + two_0**2 / square_2
-        return number, c_0 + c_1 * one_0 + c_2 * two_0, factor, c_1, scatter
+        curved = np.where((number >= FEWEST) & (square_2 > 0), c_2 * (2 * one_0 - tilt), 0.0)
+        return number, c_0 + c_1 * one_0 + c_2 * two_0, factor, c_1 + curved, scatter
 
 
 def _through_four(s, near, fraction, noise):
