@@ -235,7 +235,7 @@ def at_crossings(crossings: pd.DataFrame, corrected: dict[str, pd.DataFrame]) ->
 def run_state(content: dict, records: dict, crossing_rms: dict) -> dict:
     """Gather what the history keeps of a run."""
     return {
-        "figures": {**crossing_rms, **{label: value for label, value in content["headline"] if "rms" not in label}},
+        "figures": {**crossing_rms, **{label: text for label, text in content["headline"] if "rms" not in label}},
         "lines": {
             provenance.to_json([row["survey"], row["line"]]): {"level_nt": _plain(row["level_nt"]), "kept": row["kept"]}
             for row in content["lines"]
@@ -268,11 +268,12 @@ def main(job: stage.Job) -> None:
     kept = sum(int(table["anomaly_nt"].notna().sum()) for table in corrected.values())
     used = np.isfinite(crossings["residual_nt"].to_numpy(float))
     found = {
-        "crossing rms before levelling, nT": rms(crossings["mismatch_nt"][used]),
-        "crossing rms after levelling, nT": rms(crossings["residual_nt"]),
-        "crossing rms left out, nT": rms(crossings["left_out_nt"]),
+        "rms of all crossings before levelling, nT": rms(crossings["mismatch_nt"]),
+        "rms of the crossings used, before levelling, nT": rms(crossings["mismatch_nt"][used]),
+        "rms of the crossings used, after levelling, nT": rms(crossings["residual_nt"]),
+        "rms of the crossings used, left out, nT": rms(crossings["left_out_nt"]),
     }
-    before, after, left_out = found.values()
+    whole, before, after, left_out = found.values()
     told = f"{number(before)} nT before levelling, {number(after)} nT after, {number(left_out)} nT left out"
     several = len(keys) > 1
     ordered = sorted(
@@ -292,7 +293,8 @@ def main(job: stage.Job) -> None:
             ("Readings with an anomaly", number(kept)),
             ("Lines", number(sum(len(table) for table in tables.values()))),
             ("Crossings used", f"{number(int(used.sum()))} of {number(len(crossings))}"),
-            ("Crossing mismatch, rms", told),
+            ("Mismatch of all crossings, rms", f"{number(whole)} nT before levelling"),
+            ("Mismatch of those used, rms", told),
         ],
         "notes": [(who(*place), sentence) for place, record in ordered for sentence in record["notes"]],
         "done": [(who(*place), record.get("done", "")) for place, record in ordered],

@@ -19,12 +19,14 @@ ORDER = [
     "crossovers",
     "levelling",
     "profiles",
+    "exports",
     "report",
 ]
 EVERYTHING = set(ORDER)
 FROM_POSITION = EVERYTHING - {"ingest", "lines", "screen"}
-FROM_DIURNAL = {"diurnal", "heading", "crossovers", "levelling", "profiles", "report"}
-FROM_LEVELLING = {"levelling", "profiles", "report"}
+FROM_PROFILES = {"profiles", "exports", "report"}
+FROM_LEVELLING = {"levelling"} | FROM_PROFILES
+FROM_DIURNAL = {"diurnal", "heading", "crossovers"} | FROM_LEVELLING
 
 
 @pytest.fixture
@@ -72,8 +74,8 @@ CHANGES = {
     "a setting of the heading": (lambda f: _edit(f / "survey.yaml", r"^(  significance:) *\S+", r"\1 0.02"), FROM_DIURNAL - {"diurnal"}),
     "a setting of the crossovers": (lambda f: _edit(f / "survey.yaml", r"^(  smallest_angle_deg:) *\S+", r"\1 20.0"), FROM_LEVELLING | {"crossovers"}),
     "a setting of levelling": (lambda f: _edit(f / "survey.yaml", r"^(  robust:) *\S+", r"\1 false"), FROM_LEVELLING),
-    "a setting of the profiles": (lambda f: _edit(f / "survey.yaml", r"^(  spacing_km:) *\S+", r"\1 0.2"), {"profiles", "report"}),
-    "the ship's name": (lambda f: _edit(f / "survey.yaml", r"^(  vessel:).*", r"\1 Another ship"), {"profiles", "report"}),
+    "a setting of the profiles": (lambda f: _edit(f / "survey.yaml", r"^(  spacing_km:) *\S+", r"\1 0.2"), FROM_PROFILES),
+    "the ship's name": (lambda f: _edit(f / "survey.yaml", r"^(  vessel:).*", r"\1 Another ship"), FROM_PROFILES),
     "one row of the cable log": (lambda f: _edit(f / "cable.csv", r"^(20[^,\n]+, *)(\d)", r"\g<1>1\2"), FROM_POSITION),
     "the line log": (lambda f: _edit(f / "lines.csv", r"^(\w[^,\n]*),( *)line,", r"\1,\2tie,"), EVERYTHING - {"ingest"}),
     "an edit that rejects": (lambda f: _add_edit(f, f"reject,{_a_line(f)},,,,test,T,2025-01-01"), EVERYTHING - {"ingest", "lines", "position", "main_field", "diurnal"}),
@@ -107,7 +109,7 @@ def test_a_changed_raw_file_reruns_everything_after_its_reader(demo):
 def test_a_missing_result_is_made_again(demo):
     (path,) = (demo / "reduced").glob("*/profiles.parquet")
     path.unlink()
-    assert planned(demo) == {"profiles", "report"}
+    assert planned(demo) == FROM_PROFILES
 
 
 def test_changed_code_of_a_stage_reruns_it(demo, tmp_path):
