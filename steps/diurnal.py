@@ -418,7 +418,7 @@ def three_hour_ranges(station: Station, start_s: float, end_s: float) -> float |
 # -- stage -----------------------------------------------------------------------------------------------------------
 
 
-def _read(source, paths) -> tuple[pd.DataFrame, tuple, list[dict]]:
+def read_station(source, paths) -> tuple[pd.DataFrame, tuple, list[dict]]:
     """Read one station's files: its record, its position, and what each file held."""
     from steps import clock
     from steps.provenance import checksum
@@ -458,7 +458,7 @@ def main(job: stage.Job) -> None:
     n = len(time)
     stations, files = [], []
     for number, source in enumerate(own.base_stations):
-        record, place, read = _read(source, job.inputs[f"base_{number}"])
+        record, place, read = read_station(source, job.inputs[f"base_{number}"])
         files += read
         field = record["total_field_nt"].to_numpy()
         odd = (field < 10_000) | (field > 100_000)

@@ -103,7 +103,7 @@ def shift_clocks(readings: pd.DataFrame, rows: list[dict], files: list[str]) -> 
     return readings.assign(time_utc=shifted)
 
 
-def _read_readings(source, paths: list[Path]) -> tuple[list[pd.DataFrame], list[dict]]:
+def read_readings(source, paths: list[Path]) -> tuple[list[pd.DataFrame], list[dict]]:
     """Read the readings of every file, with a note of what each file held."""
     parts, files = [], []
     for number, path in enumerate(paths):
@@ -135,7 +135,7 @@ def _entry(path: Path, counts: dict, time: pd.Series) -> dict:
     return entry
 
 
-def _read_navigation(sources, inputs: dict) -> tuple[list, list, list[dict]]:
+def read_navigation(sources, inputs: dict) -> tuple[list, list, list[dict]]:
     """Read fixes and headings of every source."""
     fixes, headings, files = [], [], []
     for number, source in enumerate(sources):
@@ -188,7 +188,7 @@ def _text(instant) -> str:
 
 def main(job: stage.Job) -> None:
     """Read every raw file, put readings, fixes and headings in order, and balance the books."""
-    parts, files = _read_readings(job.settings.readings, job.inputs["readings"])
+    parts, files = read_readings(job.settings.readings, job.inputs["readings"])
     records = sum(file["counts"]["records"] for file in files)
     silent = sum(file["counts"].get("without reading", 0) for file in files)
     joined = pd.concat(parts, ignore_index=True)
@@ -200,7 +200,7 @@ def main(job: stage.Job) -> None:
     ledger |= {name: counts[name] for name in ("repeated", "contradictory")}
     if records != sum(number for name, number in ledger.items() if name != "records"):
         raise RuntimeError(f"the books do not balance: {ledger}")
-    fixes, headings, navigation_files = _read_navigation(job.settings.navigation, job.inputs)
+    fixes, headings, navigation_files = read_navigation(job.settings.navigation, job.inputs)
     navigation, repeated = join_navigation(fixes, ["latitude_deg", "longitude_deg", "course_deg", "speed_mps"])
     gyro, _ = join_navigation(headings, ["heading_deg"])
     _judge(job, readings, navigation, gyro, counts)
