@@ -1,22 +1,27 @@
-"""Solve the levelling of lines at their crossings: weighted, robust, sparse least squares with priors.
+"""Solve large levelling adjustments: weighted, robust, sparse least squares with priors, cost linear in crossings.
 
-At a crossing k of two passes the mismatch is ``y_k = a_k . x + e_k``, with x the unknowns (values of the correction at
-the nodes of the lines), ``a_k`` sparse and ``e_k`` of known relative variance. The estimate minimises
-``(y - A x)' W (y - A x) + x' P x`` (generalised least squares with prior precision P, Gauss-Markov; e.g. Tarantola
-2005, *Inverse Problem Theory*, ch. 3). What only differences of lines can never tell, the common level of a connected
-network, is fixed by one condition a network. Weights are those of Huber (1964), then of Tukey's biweight (Beaton &
-Tukey 1974), with the scale from the data by the median absolute deviation.
+The unknowns z (values of the corrections at the nodes of the lines, and the coefficients of the surveys) have the prior
+covariance ``L L'`` of block form, so that ``z = L x`` with x of unit covariance; at crossing k the mismatch is
+``y_k = a_k z + e_k``. The estimate minimises ``(y - A L x)' W (y - A L x) + x' x`` (generalised least squares with
+priors, Gauss-Markov; e.g. Tarantola 2005, *Inverse Problem Theory*, ch. 3), by conjugate gradients on the normal
+equations, preconditioned by the blocks on their diagonal. Weights are those of Huber (1964), then of Tukey's biweight
+(Beaton & Tukey 1974, *Technometrics* 16), with the scale from the data by the median absolute deviation. The posterior
+covariance is the inverse of the normal matrix; beyond `INVERTED` unknowns it is sampled: the conditional covariance of
+a block, which is exact, plus that of its conditional mean over draws from the posterior (Rao-Blackwell).
 """
 
 from dataclasses import dataclass, field
 
 import numpy as np
 
-HUBER, TUKEY = 1.345, 4.685  # 95 % efficiency at the normal distribution
+HUBER, TUKEY = 1.345, 6.0  # robust standard deviations; a clean survey loses about 1 % to Tukey's at 6
+LEAST_SCALE = 0.5  # of the standardised residuals, below which the variances are taken to be too large
 MAD_TO_SIGMA = 1.4826
-DENSE = 2000  # unknowns up to which the normal matrix is factored, beyond it conjugate gradients
 INVERTED = 10_000  # unknowns up to which the whole covariance is worked out
-TOLERANCE = 1e-8  # of the conjugate gradients, on the preconditioned residual
+FACTORED = 2500  # unknowns up to which the normal matrix is factored rather than iterated on
+TOLERANCE = 1e-8  # of the conjugate gradients
+DRAWS = 32
+CHUNK = 1 << 18  # crossings handled at once where memory counts
 
 
 @dataclass(frozen=True)
@@ -25,30 +30,42 @@ class Solution:
 
     Attributes
     ----------
-    unknowns : array, shape (p,)
-        Estimate, in the unit of the mismatches.
-    covariance : array, shape (p, p), or None
-        Posterior covariance under the datum condition, scaled with `scale`; None beyond `INVERTED` unknowns.
+    unknowns : array, shape (r,)
+        Estimate of x; of unit prior covariance.
+    covariance : array, shape (r, r), or None
+        Posterior covariance of x; None beyond `INVERTED` unknowns.
+    blocks : dict of int to array, or None
+        In its stead, the posterior covariance of each block.
+    draws : array, shape (r, k), or None
+        And draws from the posterior, about the estimate.
     residual : array, shape (n,)
-        Mismatch minus what the unknowns predict, for every crossing, used or not.
+        Mismatch minus what the estimate predicts, for every crossing, used or not.
     left_out : array, shape (n,)
-        Mismatch minus what the *other* crossings predict, ``r / (1 - h)``; NaN where they predict nothing.
+        Mismatch minus what the *other* crossings predict, ``r / (1 - h)``.
+    left_out_variance : array, shape (n,)
+        Variance of that, as the model has it.
     weight : array, shape (n,)
         Robust weight, 0 (rejected) to 1.
     leverage : array, shape (n,)
         Diagonal of the hat matrix.
     scale : float
         Robust standard deviation of the standardised residuals: 1 where the variances given are right.
+    solve : callable
+        Solves the normal equations for further right-hand sides, shape (r,).
 
     """
 
     unknowns: np.ndarray
     covariance: np.ndarray | None = field(repr=False)
+    blocks: dict | None = field(repr=False)
+    draws: np.ndarray | None = field(repr=False)
     residual: np.ndarray = field(repr=False)
     left_out: np.ndarray = field(repr=False)
+    left_out_variance: np.ndarray = field(repr=False)
     weight: np.ndarray = field(repr=False)
     leverage: np.ndarray = field(repr=False)
     scale: float
+    solve: object = field(repr=False)
 
 
 def networks(first: np.ndarray, second: np.ndarray, lines: int) -> np.ndarray:
@@ -73,7 +90,7 @@ def networks(first: np.ndarray, second: np.ndarray, lines: int) -> np.ndarray:
 
     graph = coo_array((np.ones(len(first)), (first, second)), shape=(lines, lines))
     _, label = connected_components(graph, directed=False)
-    size = np.bincount(label)
+    size = np.bincount(label, minlength=1)
     size[label[np.setdiff1d(np.arange(lines), np.concatenate([first, second]))]] = 0
     earliest = np.full(len(size), lines)
     np.minimum.at(earliest, label, np.arange(lines))
@@ -98,33 +115,38 @@ def robust_scale(standardised: np.ndarray) -> float:
 
 def adjust(
     design,
+    root,
+    block: np.ndarray,
     mismatch: np.ndarray,
-    sigma: np.ndarray,
+    variance: np.ndarray,
     *,
-    prior=None,
-    datum=None,
+    weight: np.ndarray | None = None,
     robust: bool = True,
     iterations: int = 10,
+    covariance: bool = True,
 ) -> Solution:
     """Estimate the unknowns from the mismatches at crossings.
 
     Parameters
     ----------
     design : scipy.sparse.csr_array, shape (n, p)
-        What each unknown does to each mismatch.
+        A: what each unknown z does to each mismatch.
+    root : scipy.sparse.csr_array, shape (p, r)
+        L: its product with its transpose is the prior covariance of z.
+    block : array of int, shape (r,)
+        Block of each x; ascending. Blocks that few crossings connect make it quick.
     mismatch : array, shape (n,)
         Observed mismatches.
-    sigma : array, shape (n,)
-        One sigma of each mismatch; a common factor does not matter to the estimate.
-    prior : scipy.sparse array, shape (p, p), optional
-        Prior precision of the unknowns (mean zero), positive semi-definite; none by default.
-    datum : scipy.sparse array, shape (q, p), optional
-        One row for each network, whose product with the unknowns is to be zero; its unknowns raised together must
-        change no mismatch. A row of zeros is none.
+    variance : array, shape (n,)
+        Variance of each mismatch about what z predicts.
+    weight : array, shape (n,), optional
+        Weights to begin with, 1 by default.
     robust : bool
         Reweight, Huber for the first half of the iterations and Tukey for the rest.
     iterations : int
         Number of reweightings at most.
+    covariance : bool
+        Work out covariance and leverages, without which leave-one-out values are missing.
 
     Returns
     -------
@@ -133,126 +155,264 @@ def adjust(
     """
     from scipy.sparse import csr_array
 
-    design = csr_array(design)
-    n, p = design.shape
-    prior = csr_array((p, p)) if prior is None else csr_array(prior)
-    datum = csr_array((0, p)) if datum is None else csr_array(datum)
-    weight = np.ones(n)
-    precision = 1.0 / np.asarray(sigma, float) ** 2
-    x, covariance = _solve(design, mismatch, precision, prior, datum, np.zeros(p), p <= DENSE)
+    design, root = csr_array(design), csr_array(root)
+    n, r = design.shape[0], root.shape[1]
+    sigma = np.sqrt(variance)
+    weight = np.ones(n) if weight is None else weight.copy()
+    whole = csr_array(design @ root) if r <= INVERTED or root.nnz <= 4 * r else None  # else A, then L
+    system = _System(design, root, whole, block)
+    x = system.solve(mismatch, weight / variance, np.zeros(r))
     for k in range(iterations if robust else 0):
-        residual = mismatch - design @ x
-        standardised = residual / sigma
-        if covariance is not None:  # what a crossing shares with the fit makes its residual too small
-            leverage = _leverage(design, covariance, weight * precision)
-            standardised = standardised / np.sqrt(np.maximum(1 - leverage, 1e-9))
-            determined = leverage < 1 - 1e-6
-        else:
-            determined = np.ones(n, bool)
-        scale = robust_scale(standardised[determined])
-        if scale <= 1e-9 * max(1.0, float(np.max(np.abs(mismatch / sigma), initial=0.0))):
-            break  # all fit exactly: nothing to weigh
+        standardised = (mismatch - system.forward(x)) / sigma
+        scale = robust_scale(standardised[weight > 0])
+        scale = max(scale, LEAST_SCALE)
         form = "huber" if k < iterations // 2 else "tukey"
-        new = np.where(determined, robust_weight(standardised / scale, form), 1.0)
-        settled = form == "tukey" and np.max(np.abs(new - weight), initial=0.0) < 1e-3
+        new = robust_weight(standardised / scale, form)
+        settled = form == "tukey" and float(np.max(np.abs(new - weight), initial=0.0)) < 1e-3
         weight = new
-        x, covariance = _solve(design, mismatch, weight * precision, prior, datum, x, p <= DENSE)
+        x = system.solve(mismatch, weight / variance, x)
         if settled:
             break
-    if covariance is None and p <= INVERTED:
-        covariance = _covariance(design, weight * precision, prior, datum)
-    residual = mismatch - design @ x
-    leverage = np.full(n, np.nan) if covariance is None else _leverage(design, covariance, weight * precision)
-    with np.errstate(divide="ignore", invalid="ignore"):
-        left_out = np.where(leverage < 1 - 1e-6, residual / (1 - leverage), np.nan)
-    left_out = np.where(weight > 0, left_out, residual)
-    used = (weight > 0) & np.isfinite(left_out)
-    scale = robust_scale(residual[used] / sigma[used] / np.sqrt(1 - leverage[used]))
-    if covariance is not None:
-        covariance = covariance * scale**2
-    return Solution(x, covariance, residual, left_out, weight, leverage, scale)
+    residual = mismatch - system.forward(x)
+    precision = weight / variance
+    whole_covariance = blocks = draws = None
+    leverage = np.full(n, np.nan)
+    if covariance and r <= INVERTED:
+        whole_covariance = system.inverse(precision)
+        leverage = np.clip(quadratic(system.whole, whole_covariance) * precision, 0.0, 1.0)
+    elif covariance:
+        blocks, draws = system.sample(precision)
+        leverage = np.clip(system.sampled_leverage(blocks, draws) * precision, 0.0, 1.0)
+    free = np.maximum(1 - leverage, 1e-9)
+    left_out = np.where(weight > 0, residual / free, residual)
+    spread = np.where(weight > 0, variance / np.maximum(weight, 1e-12) / free, np.nan)
+    spread = np.where(weight > 0, spread - variance / np.maximum(weight, 1e-12) + variance, np.nan)
+    used = weight > 0
+    scale = (
+        robust_scale(left_out[used] / np.sqrt(spread[used]))
+        if covariance
+        else robust_scale(residual[used] / sigma[used])
+    )
+    return Solution(
+        x,
+        whole_covariance,
+        blocks,
+        draws,
+        residual,
+        left_out,
+        spread,
+        weight,
+        leverage,
+        scale,
+        lambda right: system.solve_normal(right, precision),
+    )
 
 
-def _solve(design, mismatch, precision, prior, datum, start, dense):
-    """Solve the normal equations; with the covariance where it comes for nothing."""
-    weighted = design.multiply(precision[:, None]).tocsr()
-    right = weighted.T @ mismatch
-    if dense:
-        covariance = _covariance(design, precision, prior, datum)
-        return covariance @ right, covariance
-    normal = (design.T @ weighted + prior).tocsr()
-    return _on_datum(_conjugate_gradients(normal, right, start), datum), None
+class _System:
+    """The normal equations ``(I + L'A'WAL) x = L'A'W y`` and their solution."""
+
+    def __init__(self, design, root, whole, block):
+        from scipy.sparse import csr_array
+
+        self.whole, self._design, self._root = whole, design, root
+        self._forward = [whole] if whole is not None else [root, design]
+        self._back = [csr_array(part.T) for part in reversed(self._forward)]
+        self._block, self._size = block, root.shape[1]
+        self._preconditioner = None
+        starts = np.flatnonzero(np.diff(block, prepend=-1))
+        self._starts = starts
+        self._sizes = np.diff(np.append(starts, self._size))
+
+    def forward(self, x):
+        """Return A L x."""
+        for part in self._forward:
+            x = part @ x
+        return x
+
+    def back(self, v):
+        """Return L'A' v."""
+        for part in self._back:
+            v = part @ v
+        return v
+
+    def normal(self, x, precision):
+        """Return the product of the normal matrix with x."""
+        scaled = precision[:, None] if x.ndim > 1 else precision
+        return x + self.back(scaled * self.forward(x))
+
+    def solve(self, mismatch, precision, start):
+        """Solve for one vector of mismatches."""
+        return self.solve_normal(self.back(precision * mismatch), precision, start)
+
+    def solve_normal(self, right, precision, start=None):
+        """Solve the normal equations for a right-hand side, shape (r,) or (r, k)."""
+        if self._size <= FACTORED and self.whole is not None:
+            from scipy.linalg import cho_solve
+
+            return cho_solve(self._factor(precision), right, check_finite=False)
+        return self._conjugate_gradients(right, precision, np.zeros_like(right) if start is None else start)
+
+    def _dense(self, precision):
+        weighted = self.whole.multiply(np.sqrt(precision)[:, None]).tocsr()
+        if self.whole.nnz > 0.05 * self.whole.shape[0] * self._size:
+            full = np.zeros((self._size, self._size), order="F")
+            for first in range(0, weighted.shape[0], CHUNK // 64):
+                rows = weighted[first : first + CHUNK // 64].toarray()
+                full += rows.T @ rows
+        else:
+            full = (weighted.T @ weighted).toarray(order="F")
+        full[np.diag_indices_from(full)] += 1.0
+        return full
+
+    def _factor(self, precision):
+        from scipy.linalg import cho_factor
+
+        return cho_factor(self._dense(precision), lower=True, overwrite_a=True, check_finite=False)
+
+    def inverse(self, precision):
+        """Return the posterior covariance of x."""
+        from scipy.linalg.lapack import dpotri
+
+        factor, _ = self._factor(precision)
+        inverse, _ = dpotri(factor, lower=1, overwrite_c=1)
+        for first in range(0, self._size, 512):  # the upper triangle, without a second matrix
+            last = min(first + 512, self._size)
+            square = inverse[first:last, first:last]
+            inverse[first:last, first:last] = np.tril(square) + np.tril(square, -1).T
+            inverse[first:last, last:] = inverse[last:, first:last].T
+        return inverse
+
+    def _block_matrices(self, precision):
+        """Return the blocks on the diagonal of the normal matrix, stacked by size: {size: (numbers, matrices)}."""
+        from scipy.sparse import csr_array
+
+        position = np.arange(self._size) - np.repeat(self._starts, self._sizes)
+        stacks = {int(s): np.flatnonzero(self._sizes == s) for s in np.unique(self._sizes)}
+        number = np.empty(len(self._sizes), int)
+        for members in stacks.values():
+            number[members] = np.arange(len(members))
+        of_column = np.repeat(np.arange(len(self._sizes)), self._sizes)
+        matrices = {s: np.tile(np.eye(s), (len(members), 1, 1)) for s, members in stacks.items()}
+        if self.whole is not None:
+            for first in range(0, self.whole.shape[0], CHUNK):
+                rows = self.whole[first : first + CHUNK]
+                own = rows.multiply(np.sqrt(precision[first : first + CHUNK])[:, None]).tocsr()
+                self._add_blocks(matrices, csr_array(own.T @ own).tocoo(), of_column, number, position)
+        else:  # within a block L, A'WA within its rows
+            own = self._design.multiply(np.sqrt(precision)[:, None]).tocsr()
+            nodes = csr_array(own.T @ own)
+            block_of_row = np.zeros(self._root.shape[0], int) - 1
+            filled = np.diff(self._root.indptr) > 0
+            block_of_row[filled] = of_column[self._root.indices[self._root.indptr[:-1][filled]]]
+            inner = nodes.tocoo()
+            same = block_of_row[inner.row] == block_of_row[inner.col]
+            inner = csr_array((inner.data[same], (inner.row[same], inner.col[same])), shape=nodes.shape)
+            product = csr_array(self._root.T @ csr_array(inner @ self._root)).tocoo()
+            self._add_blocks(matrices, product, of_column, number, position)
+        return {s: (members, matrices[s]) for s, members in stacks.items()}
+
+    def _add_blocks(self, matrices, product, of_column, number, position):
+        same = of_column[product.row] == of_column[product.col]
+        row, column, value = product.row[same], product.col[same], product.data[same]
+        size = self._sizes[of_column[row]]
+        for s, stack in matrices.items():
+            mine = size == s
+            np.add.at(stack, (number[of_column[row[mine]]], position[row[mine]], position[column[mine]]), value[mine])
+
+    def _conjugate_gradients(self, right, precision, x):
+        """Solve by preconditioned conjugate gradients, several right-hand sides side by side."""
+        if self._preconditioner is None:  # weights change little from iteration to iteration: made once
+            blocks = self._block_matrices(precision)
+            self._preconditioner = {s: (members, np.linalg.inv(stack)) for s, (members, stack) in blocks.items()}
+        residual = right - self.normal(x, precision)
+        limit = TOLERANCE * np.sqrt(np.sum(right * self._precondition(right), axis=0))
+        z = self._precondition(residual)
+        direction, energy = z, np.sum(residual * z, axis=0)
+        for _ in range(2000):
+            if np.all(np.sqrt(energy) <= limit):
+                break
+            image = self.normal(direction, precision)
+            curvature = np.sum(direction * image, axis=0)
+            step = np.where(curvature > 0, energy / np.where(curvature > 0, curvature, 1.0), 0.0)
+            x = x + step * direction
+            residual = residual - step * image
+            z = self._precondition(residual)
+            last, energy = energy, np.sum(residual * z, axis=0)
+            direction = z + np.where(last > 0, energy / np.where(last > 0, last, 1.0), 0.0) * direction
+        return x
+
+    def _precondition(self, v):
+        return self._by_block(v, self._preconditioner)
+
+    def _by_block(self, v, stacks):
+        """Multiply each block of v, shape (r,) or (r, k), with its own matrix."""
+        found = np.empty_like(v)
+        for s, (members, matrices) in stacks.items():
+            rows = self._starts[members][:, None] + np.arange(s)
+            part = v[rows]
+            found[rows] = np.einsum("bij,bj->bi", matrices, part) if v.ndim == 1 else np.matmul(matrices, part)
+        return found
+
+    def sample(self, precision):
+        """Draw from the posterior, and work out the covariance of each block with it."""
+        rng = np.random.default_rng(20)
+        noise = rng.standard_normal((len(precision), DRAWS)) * np.sqrt(precision)[:, None]
+        right = self.back(noise) + rng.standard_normal((self._size, DRAWS))
+        del noise
+        self._preconditioner = None
+        draws = self._conjugate_gradients(right, precision, np.zeros_like(right))
+        exact = self._preconditioner  # inverses of the blocks under the final weights
+        conditional = draws - self._by_block(self.normal(draws, precision), exact)
+        blocks = {}
+        for s, (members, matrices) in exact.items():
+            part = conditional[self._starts[members][:, None] + np.arange(s)]
+            stack = matrices + np.matmul(part, part.transpose(0, 2, 1)) / DRAWS
+            blocks |= dict(zip(members.tolist(), stack, strict=True))
+        return blocks, draws
+
+    def sampled_leverage(self, blocks, draws):
+        """Return ``a L C L'a'`` of each crossing from draws."""
+        total = np.zeros(self._design.shape[0])
+        for k in range(draws.shape[1]):
+            total += self.forward(draws[:, k]) ** 2
+        return total / draws.shape[1]
 
 
-def _on_datum(x, datum):
-    """Shift the unknowns of each network together so that its datum condition holds."""
-    for row in range(datum.shape[0]):
-        members = datum.indices[datum.indptr[row] : datum.indptr[row + 1]]
-        share = datum.data[datum.indptr[row] : datum.indptr[row + 1]]
-        if len(members):
-            x[members] -= share @ x[members] / share.sum()
-    return x
+def quadratic(rows, covariance: np.ndarray, others=None) -> np.ndarray:
+    """Return ``f C g'`` for each pair of rows f, g of two sparse matrices.
 
+    Parameters
+    ----------
+    rows : scipy.sparse.csr_array, shape (n, r)
+    covariance : array, shape (r, r)
+        Symmetric.
+    others : scipy.sparse.csr_array, shape (n, r), optional
+        `rows` by default.
 
-def _covariance(design, precision, prior, datum):
-    """Invert the normal matrix under the datum conditions; directions that nothing determines get no variance."""
-    from scipy.linalg import cho_factor
-    from scipy.linalg.lapack import dpotri
+    Returns
+    -------
+    array, shape (n,)
 
-    normal = (design.T @ design.multiply(precision[:, None]) + prior).toarray(order="F")
-    size = np.sqrt(np.maximum(np.diag(normal), 0.0))
-    size[size == 0] = 1.0
-    normal /= size
-    normal /= size[:, None]
-    for row in range(datum.shape[0]):  # (N + c c')^-1 minus the common shift is the covariance under c'x = 0
-        members = datum.indices[datum.indptr[row] : datum.indptr[row + 1]]
-        share = datum.data[datum.indptr[row] : datum.indptr[row + 1]]
-        if len(members):
-            share = share / share.sum() * np.sqrt(len(members))
-            normal[np.ix_(members, members)] += np.outer(share / size[members], share / size[members]) * np.mean(
-                size[members] ** 2
-            )
-    normal[np.diag_indices_from(normal)] += 1e-13
-    factor, _ = cho_factor(normal, lower=True, overwrite_a=True, check_finite=False)
-    inverse, _ = dpotri(factor, lower=True, overwrite_c=True)
-    lower = np.tril_indices_from(inverse, -1) if len(inverse) <= DENSE else None
-    if lower is not None:
-        inverse.T[lower] = inverse[lower]
-    else:
-        for column in range(len(inverse)):
-            inverse[column, column + 1 :] = inverse[column + 1 :, column]
-    inverse /= size
-    inverse /= size[:, None]
-    for row in range(datum.shape[0]):
-        members = datum.indices[datum.indptr[row] : datum.indptr[row + 1]]
-        share = datum.data[datum.indptr[row] : datum.indptr[row + 1]]
-        if len(members):
-            projected = inverse[:, members] @ (share / share.sum())
-            inverse[members] -= projected
-            projected = inverse[:, members] @ (share / share.sum())
-            inverse[:, members] -= projected[:, None]
-    return inverse
-
-
-def _leverage(design, covariance, precision):
-    """Return the diagonal of the hat matrix, ``w a' C a``, from the few entries of C that each crossing touches."""
-    count = np.diff(design.indptr)
-    found = np.zeros(design.shape[0])
-    for terms in np.unique(count):
-        rows = np.flatnonzero(count == terms)
-        at = design.indptr[rows][:, None] + np.arange(terms)
-        column, value = design.indices[at], design.data[at]
-        for i in range(terms):
-            for j in range(terms):
-                found[rows] += value[:, i] * value[:, j] * covariance[column[:, i], column[:, j]]
-    return np.clip(found * precision, 0.0, 1.0)
-
-
-def _conjugate_gradients(normal, right, start):
-    """Solve the normal equations by conjugate gradients, preconditioned by the diagonal."""
-    from scipy.sparse.linalg import LinearOperator, cg
-
-    diagonal = normal.diagonal()
-    inverse = np.where(diagonal > 0, 1 / np.where(diagonal > 0, diagonal, 1.0), 1.0)
-    x, _ = cg(normal, right, x0=start, rtol=TOLERANCE, M=LinearOperator(normal.shape, lambda v: inverse * v))
-    return x
+    """
+    others = rows if others is None else others
+    found = np.zeros(rows.shape[0])
+    if rows.nnz > 24 * max(1, rows.shape[0]):
+        step = max(1, (1 << 24) // max(1, rows.shape[1]))
+        for first in range(0, rows.shape[0], step):
+            part = slice(first, first + step)
+            found[part] = np.einsum("ij,ij->i", rows[part].toarray() @ covariance, others[part].toarray())
+        return found
+    counts, other_counts = np.diff(rows.indptr), np.diff(others.indptr)
+    for terms, other_terms in {tuple(pair) for pair in np.unique(np.column_stack([counts, other_counts]), axis=0)}:
+        alike = np.flatnonzero((counts == terms) & (other_counts == other_terms))
+        for first in range(0, len(alike), CHUNK):
+            some = alike[first : first + CHUNK]
+            left = rows.indptr[some][:, None] + np.arange(terms)
+            right = others.indptr[some][:, None] + np.arange(other_terms)
+            total = np.zeros(len(some))
+            for i in range(terms):
+                for j in range(other_terms):
+                    picked = covariance[rows.indices[left[:, i]], others.indices[right[:, j]]]
+                    total += rows.data[left[:, i]] * others.data[right[:, j]] * picked
+            found[some] = total
+    return found

@@ -119,6 +119,12 @@ COLUMNS = {
     "level_nt": Column("nT", "float64", "levelling correction of the line; subtracted"),
     "sigma_level_nt": Column("nT", "float64", "one sigma of the level term"),
     "level_flags": Column("1", "uint32", "flags set by levelling"),
+    "heading_change_nt": Column("nT", "float64", "change of the heading term by the joint adjustment; add to it"),
+    "diurnal_change_nt": Column("nT", "float64", "change of the diurnal term by the joint adjustment; add to it"),
+    "position_change_nt": Column("nT", "float64", "part of the level term that undoes errors of layback and clock"),
+    "sigma_joint_nt": Column(
+        "nT", "float64", "one sigma of diurnal, heading and level terms together after the adjustment, datum left out"
+    ),
     "sigma_datum_nt": Column("nT", "float64", "one sigma of the datum, common to a connected network"),
     "sigma_position_nt": Column("nT", "float64", "position error times the local along-track gradient, one sigma"),
     "anomaly_nt": Column("nT", "float64", "total field - main field - diurnal - heading - level"),
@@ -212,7 +218,16 @@ TABLES = {
         "sigma_mismatch_nt",
         "status",
     ],
-    "levelling": ["level_nt", "sigma_level_nt", "level_flags"],
+    "levelling": [
+        "level_nt",
+        "sigma_level_nt",
+        "heading_change_nt",
+        "diurnal_change_nt",
+        "position_change_nt",
+        "sigma_joint_nt",
+        "sigma_datum_nt",
+        "level_flags",
+    ],
     "levelling_lines": [
         "survey",
         "line",

@@ -1,126 +1,49 @@
-"""Level the lines of all surveys to each other at their crossings.
+"""Level the lines of all surveys, and adjust what the earlier stages corrected, at the crossings.
 
-The correction of a line is a constant, or piecewise linear in time; mismatches at crossings are its only witnesses:
-``A_i - A_j = L_i(t_i) - L_j(t_j) + e``, solved by weighted, robust, sparse least squares (`steps.adjustment`). The
-common level of a connected network is not observable: the weighted mean of its corrections is zero, or named lines are
-held. A line without a usable crossing gets no correction, and a flag instead. Statistics are given before, after, and
-with each crossing left out, which alone say whether levelling helped.
+At a crossing of two passes the mismatch is ``y = E_1 - E_2 + noise`` with the error of a pass before levelling
+
+    E = line constant + line drift + drift in time + heading change + (scale - 1) diurnal + g (v dt - dB)
+
+where g is the along-track gradient, v the speed, dt the seconds to add to the logger's clock and dB the metres to add
+to the layback. All terms are estimated at once by generalised least squares with priors (`steps.collocation`,
+`steps.adjustment`); a term is kept only if it lowers the leave-one-out figure, or if the user insists. The common level
+of a connected network is not observable: the mean over its readings of all that is applied is zero, or named lines are
+held. A line without a usable crossing gets no correction, and a flag instead.
 """
 
-from dataclasses import dataclass
+import json
+from dataclasses import replace
 
 import numpy as np
 import pandas as pd
 
-from steps import adjustment, edits, stage
-from steps.columns import Flag
+from steps import adjustment, determined, edits, joint, stage
+from steps.collocation import EFFECTS, EFFECTS_OF, Crossings, Points
 from steps.errors import SurveyError, mistake
-
-DRIFT_STRENGTHS = np.geomspace(0.01, 100.0, 13)  # of the drift, sigmas of a crossing per square root of an hour
-PASSES = ("_1", "_2")
-
-
-@dataclass(frozen=True)
-class Nodes:
-    """Instants at which the corrections of the lines are unknowns, in order of line and time.
-
-    Attributes
-    ----------
-    line : array of int, shape (p,)
-        Row of the table of all lines.
-    time_utc : array of datetime64[ns], shape (p,)
-        When.
-
-    """
-
-    line: np.ndarray
-    time_utc: np.ndarray
-
-    def between(self, line: np.ndarray, time_utc: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-        """Place instants between the nodes of their lines.
-
-        Returns
-        -------
-        first : array of int, shape (n,)
-            Node before the instant; on a line with one node, that one.
-        share : array, shape (n,)
-            Place between it and the next node of the line, 0 to 1.
-
-        """
-        starts = np.searchsorted(self.line, line)
-        stops = np.searchsorted(self.line, line, side="right")
-        times = self.time_utc.astype("int64")
-        origin = times.min(initial=0)
-        span = float(times.max(initial=0) - origin) + 1.0
-        key = self.line + (times - origin) / span * 0.5  # rises along the nodes
-        wanted = line + np.clip((time_utc.astype("int64") - origin) / span, 0.0, 1.0) * 0.5
-        last = np.maximum(stops - 2, starts)
-        first = np.clip(np.searchsorted(key, wanted, side="right") - 1, starts, last)
-        following = np.where(stops - starts > 1, first + 1, first)
-        width = (times[following] - times[first]).astype(float)
-        passed = (time_utc.astype("int64") - times[first]).astype(float)
-        return first, np.where(width > 0, np.clip(passed / np.where(width > 0, width, 1.0), 0.0, 1.0), 0.0)
-
-    def design(self, line: np.ndarray, time_utc: np.ndarray):
-        """Return the sparse matrix that interpolates node values to instants, shape (n, p)."""
-        from scipy.sparse import csr_array
-
-        first, share = self.between(line, time_utc)
-        n, p = len(first), len(self.line)
-        if not share.any():
-            return csr_array((np.ones(n), (np.arange(n), first)), shape=(n, p))
-        following = np.minimum(first + 1, p - 1)
-        rows = np.concatenate([np.arange(n)] * 2)
-        found = csr_array(
-            (np.concatenate([1 - share, share]), (rows, np.concatenate([first, following]))), shape=(n, p)
-        )
-        found.eliminate_zeros()
-        return found
+from steps.joint import PASSES, Nodes
+from steps.levels import Levels, at_readings, line_numbers, line_statistics, write_covariance
+from steps.posterior import solve
+from steps.screen import rejected
+from steps.settings import Levelling
 
 
-def place_nodes(start_utc: np.ndarray, end_utc: np.ndarray, spacing_h: float | None) -> Nodes:
-    """Place the nodes of each line: its middle, or evenly from its start to its end.
+def in_order(lines: pd.DataFrame) -> pd.DataFrame:
+    """Put lines in canonical order (survey, start, name), on which no result may depend otherwise.
 
     Parameters
     ----------
-    start_utc, end_utc : array of datetime64[ns], shape (m,)
-        First and last instants of the lines.
-    spacing_h : float or None
-        Longest time between the nodes in hours; None for one node a line (a constant correction).
+    lines : pandas.DataFrame
+        survey, line, kind, start_utc, end_utc, readings; one row for each line of all surveys.
+
+    Returns
+    -------
+    pandas.DataFrame
+        With ``row``, the place of each in the input, and ``survey_number``.
 
     """
-    start, end = (np.asarray(t, "datetime64[ns]").astype("int64") for t in (start_utc, end_utc))
-    if spacing_h is None:
-        return Nodes(np.arange(len(start)), (start + (end - start) // 2).astype("datetime64[ns]"))
-    gaps = np.maximum(np.ceil((end - start) / (spacing_h * 3.6e12)), 1).astype(int)
-    line = np.repeat(np.arange(len(start)), gaps + 1)
-    number = np.arange(len(line)) - np.repeat(np.cumsum(gaps + 1) - gaps - 1, gaps + 1)
-    time = start[line] + np.round((end - start)[line] * (number / gaps[line])).astype("int64")
-    return Nodes(line, time.astype("datetime64[ns]"))
-
-
-def drift_precision(nodes: Nodes, sigma_per_root_hour: float):
-    """Return the prior precision of node values that walk at random along each line, their mean free.
-
-    Parameters
-    ----------
-    nodes : Nodes
-        Nodes of the lines.
-    sigma_per_root_hour : float
-        One sigma of the change of a correction over an hour.
-
-    """
-    from scipy.sparse import csr_array
-
-    pair = np.flatnonzero(np.diff(nodes.line) == 0)
-    hours = (np.diff(nodes.time_utc)[pair] / np.timedelta64(1, "ns")) / 3.6e12
-    weight = 1.0 / (sigma_per_root_hour * np.sqrt(np.maximum(hours, 1e-6)))
-    rows = np.arange(len(pair))
-    step = csr_array(
-        (np.concatenate([-weight, weight]), (np.concatenate([rows, rows]), np.concatenate([pair, pair + 1]))),
-        shape=(len(pair), len(nodes.line)),
-    )
-    return step.T @ step
+    ordered = lines.assign(row=np.arange(len(lines))).sort_values(["survey", "start_utc", "line"], kind="stable")
+    number = np.unique(ordered["survey"].to_numpy(str), return_inverse=True)[1] if len(ordered) else np.empty(0, int)
+    return ordered.assign(survey_number=number).reset_index(drop=True)
 
 
 def held_lines(hold: list[str], rows: list[dict], lines: pd.DataFrame) -> np.ndarray:
@@ -166,266 +89,250 @@ def held_lines(hold: list[str], rows: list[dict], lines: pd.DataFrame) -> np.nda
     return held
 
 
-def line_numbers(crossings: pd.DataFrame, lines: pd.DataFrame) -> tuple[np.ndarray, np.ndarray]:
-    """Return the rows in the table of lines of both passes of each crossing; -1 where a line is not in it."""
-    known = pd.Index(lines["survey"] + "\0" + lines["line"])
-    first, second = (
-        known.get_indexer(crossings[f"survey{p}"].astype(str) + "\0" + crossings[f"line{p}"].astype(str))
-        for p in PASSES
-    )
-    return first, second
-
-
-@dataclass(frozen=True)
-class Levels:
-    """Result of `level`: unknowns at the nodes and what the crossings say of them."""
-
-    nodes: Nodes
-    value_nt: np.ndarray
-    covariance: np.ndarray | None
-    sigma_nt: np.ndarray
-    crossings: pd.DataFrame
-    network: np.ndarray
-    scale: float
-    drift_nt_per_root_hour: float | None
-
-
 def level(
     crossings: pd.DataFrame,
     lines: pd.DataFrame,
     *,
+    settings: Levelling,
     held: np.ndarray | None = None,
-    model: str = "constant",
-    knots_h: float = 3.0,
-    robust: bool = True,
+    sigma_diurnal_nt: np.ndarray | None = None,
+    line_means: np.ndarray | None = None,
+    headings: list[dict] | None = None,
+    positions: list[dict] | None = None,
 ) -> Levels:
-    """Estimate the corrections of the lines from their crossings.
+    """Estimate the corrections of the lines, and changes of the other terms, from the crossings.
 
     Parameters
     ----------
     crossings : pandas.DataFrame
         Table `crossovers`; only rows with the status ``used`` take part.
     lines : pandas.DataFrame
-        survey, line, start_utc, end_utc, readings: one row for each line of all surveys.
+        As `in_order` returns them.
+    settings : Levelling
     held : array of bool, shape (m,), optional
-        Lines whose correction is held at zero.
-    model : {"constant", "drift"}
-        Correction of a line: constant, or piecewise linear in time.
-    knots_h : float
-        Longest time between the nodes of a drift, h.
-    robust : bool
-        Weigh down and then reject crossings that do not fit.
+        Lines whose correction is held at zero; in the order of `lines`.
+    sigma_diurnal_nt : array, shape (M,), optional
+        One sigma of the diurnal term at the nodes (`nodes_of`), NaN where it is missing; by default missing.
+    line_means : array, shape (m, 7), optional
+        Mean over the readings of each line of what a unit of each coefficient does; zero by default.
+    headings : list of dict, optional
+        Records of the heading stage by survey number.
+    positions : list of dict, optional
+        Records of the position stage, whose settings say how much of the position error is the layback's.
 
     Returns
     -------
     Levels
-        Corrections in nT, to be subtracted; NaN on lines without a usable crossing. ``crossings`` are the rows given
-        with residual_nt, left_out_nt and weight added and the status of the rejected changed.
 
     """
-    from scipy.sparse import csr_array, vstack
-
     m = len(lines)
     held = np.zeros(m, bool) if held is None else held
+    nodes = nodes_of(lines, settings)
+    surveys = list(dict.fromkeys(lines["survey"]))
+    if sigma_diurnal_nt is None:
+        sigma_diurnal_nt = np.full(len(nodes), np.nan)
+    common = {"without_base_nt": settings.sigma_without_base_nt, "held": held}
+    points = joint.make_points(lines, nodes.line, nodes.time_utc, sigma_diurnal_nt=sigma_diurnal_nt, **common)
     first, second = line_numbers(crossings, lines)
-    usable = (crossings["status"] == "used").to_numpy() & (first >= 0) & (second >= 0) & (first != second)
+    usable = (crossings["status"] == "used").to_numpy() & (first >= 0) & (second >= 0)
     usable &= np.isfinite(crossings["mismatch_nt"]) & (crossings["sigma_mismatch_nt"] > 0)
     rows = np.flatnonzero(usable)
-    first, second = first[rows], second[rows]
-    label = adjustment.networks(first, second, m)
-    nodes = place_nodes(lines["start_utc"], lines["end_utc"], knots_h if model == "drift" else None)
-    time_1, time_2 = (crossings[f"time{p}_utc"].to_numpy()[rows] for p in PASSES)
-    whole = nodes.design(first, time_1) - nodes.design(second, time_2)
-    free = np.flatnonzero((label[nodes.line] >= 0) & ~held[nodes.line])
-    design = csr_array(whole[:, free])
-    share = lines["readings"].to_numpy(float).clip(1.0)[nodes.line] / np.bincount(nodes.line, minlength=m)[nodes.line]
-    anchored = np.isin(label, label[held & (label >= 0)])
-    datum = [
-        csr_array((share[free] * (label[nodes.line[free]] == k))[None, :])
-        for k in range(label.max(initial=-1) + 1)
-        if not anchored[label == k].any()
-    ]
-    datum = csr_array(vstack(datum)) if datum else csr_array((0, len(free)))
-    mismatch = crossings["mismatch_nt"].to_numpy(float)[rows]
-    sigma = crossings["sigma_mismatch_nt"].to_numpy(float)[rows]
-    strength, solution = None, None
-    if model == "drift" and len(rows):
-        typical = float(np.median(sigma)) if len(sigma) else 1.0
-        best = np.inf
-        for factor in DRIFT_STRENGTHS:
-            prior = drift_precision(nodes, factor * typical)[free][:, free]
-            tried = adjustment.adjust(design, mismatch, sigma, prior=prior, datum=datum, robust=robust)
-            figure = rms(tried.left_out[tried.weight > 0])
-            if figure is not None and figure < best * (1 - 1e-9):
-                best, strength, solution = figure, factor * typical, tried
-    elif len(rows):
-        solution = adjustment.adjust(design, mismatch, sigma, datum=datum, robust=robust)
-    value = np.where(label[nodes.line] >= 0, 0.0, np.nan)
-    spread = value.copy()
-    residual, left_out, weight = (np.full(len(crossings), np.nan) for _ in range(3))
-    status = crossings["status"].to_numpy(object).copy()
-    if solution is not None:
-        value[free] = solution.unknowns
-        if solution.covariance is not None:
-            spread[free] = np.sqrt(np.maximum(np.diag(solution.covariance), 0.0))
-        rejected = solution.weight <= 0
-        residual[rows] = np.where(rejected, np.nan, solution.residual)
-        left_out[rows] = np.where(rejected, np.nan, solution.left_out)
-        weight[rows] = solution.weight
-        size = np.abs(solution.left_out) / (sigma * max(solution.scale, 1e-12))
-        for k in np.flatnonzero(rejected):
-            status[rows[k]] = f"does not fit the others: off by {size[k]:.0f} sigma"
-    table = crossings.assign(residual_nt=residual, left_out_nt=left_out, weight=weight, status=status)
-    covariance = None
-    if solution is not None and solution.covariance is not None:
-        covariance = np.zeros((len(nodes.line),) * 2)
-        covariance[np.ix_(free, free)] = solution.covariance
-        lost = label[nodes.line] < 0
-        covariance[lost] = covariance[:, lost] = np.nan
+    apart = rows[first[rows] != second[rows]]
+    network = adjustment.networks(first[apart], second[apart], m)
+    rows = rows[network[first[rows]] >= 0]  # a line's crossing with itself does not level it
+    headings = headings if headings is not None else [{} for _ in surveys]
+    heading_mean, heading_covariance = joint.heading_prior(headings, settings.sigma_heading_nt)
+    empty = np.zeros(len(EFFECTS), bool)
+    if not len(rows):
+        table = crossings.assign(residual_nt=np.nan, left_out_nt=np.nan, weight=np.nan)
+        zero = np.zeros(len(nodes))
+        return Levels(lines, surveys, nodes, points, network, table, None, None, None, rows, empty, heading_mean, zero)
+    # canonical: the earlier pass first, crossings in order of time
+    times = [crossings[f"time{side}_utc"].to_numpy().astype("datetime64[ns]") for side in PASSES]
+    swap = (times[1] < times[0]) | ((times[1] == times[0]) & (second < first))
+    early, late = np.where(swap, times[1], times[0]), np.where(swap, times[0], times[1])
+    low, high = np.where(swap, second, first), np.where(swap, first, second)
+    rows = rows[np.lexsort((high[rows], low[rows], late[rows], early[rows]))]
+    tow = np.array([record.get("settings", {}).get("angle") == "tow_direction" for record in headings])
+    passes = []
+    for k, (side, number) in enumerate(zip(PASSES, (first, second), strict=True)):
+        line = number[rows]
+        passes.append(
+            joint.make_points(
+                lines,
+                line,
+                times[k][rows],
+                sigma_diurnal_nt=crossings[f"sigma_diurnal{side}_nt"].to_numpy(float)[rows],
+                effects=joint.pass_effects(crossings.iloc[rows], side, tow[lines["survey_number"].to_numpy()[line]]),
+                **common,
+            )
+        )
+    flip = swap[rows]
+    one, two = (joint.choose(*pair, flip) for pair in ((passes[0], passes[1]), (passes[1], passes[0])))
+    sign = np.where(flip, -1.0, 1.0)
+    mismatch = sign * crossings["mismatch_nt"].to_numpy(float)[rows]
+    # what the calibration expects is taken out, so that all coefficients are expected to be zero
+    expected = joint.heading_of(one, heading_mean) - joint.heading_of(two, heading_mean)
+    expected = expected * (settings.heading != "off")
+    parts = joint.crossing_parts(crossings.iloc[rows], _navigation_share(positions, settings, one, two))
+    data = Crossings(mismatch - expected, parts, one, two)
+    prior = np.zeros((len(surveys), len(EFFECTS), len(EFFECTS)))
+    prior[:, :4, :4] = heading_covariance
+    for k, name in ((4, "sigma_diurnal_scale"), (5, "sigma_layback_m"), (6, "sigma_clock_s")):
+        prior[:, k, k] = getattr(settings, name) ** 2
+    wanted = joint.wanted_terms(settings, data)
+    optional = [term for term in joint.TERMS if term in wanted and getattr(settings, term) == "auto"]
+    optional = [term for term in optional if term not in settings.apply]
+    full = joint.make_model(
+        data, prior, terms=wanted, scales_h=sorted(settings.drift_scales_h), surveys=len(np.unique(one.survey))
+    )
+    kept = np.ones(len(rows), bool)
+    if settings.robust:
+        kept = joint.outliers(data, m, np.sqrt(joint.effects_variance(data, prior, wanted)))
+    needed = joint.lonely(one.line, two.line, kept, m)
+    found = joint.fit(data, full, kept, needed, m, optional, settings.robust)
+    applied = empty.copy()
+    terms = joint.kept_terms(found.model)
+    for term in terms & set(EFFECTS_OF):
+        applied[EFFECTS_OF[term]] = term in ("heading", "diurnal_scale") or term in settings.apply
+    if "heading" not in terms:
+        data = replace(data, mismatch=mismatch)
+    about = {
+        "first_utc": np.where(flip, times[1][rows], times[0][rows]),
+        "second_utc": np.where(flip, times[0][rows], times[1][rows]),
+        "readings": lines["readings"].to_numpy(float).clip(1.0),
+        "means": np.zeros((m, len(EFFECTS))) if line_means is None else np.nan_to_num(line_means),
+        "applied": applied,
+        "needed": needed,
+    }
+    posterior = solve(data, found.model, nodes, points, network=network, robust=settings.robust, kept=kept, **about)
+    left = (posterior.weight > 0) & (one.line != two.line)
+    connected = adjustment.networks(one.line[left], two.line[left], m)
+    if not np.array_equal(connected, network):  # a rejected crossing was a line's last
+        network = connected
+        kept = (posterior.weight > 0) & (network[one.line] >= 0)
+        posterior = solve(data, found.model, nodes, points, network=network, robust=False, kept=kept, **about)
+    table = _with_results(crossings, rows, sign, posterior, one.line, two.line, m)
+    neglected = joint.neglected(found, nodes, points)
     return Levels(
-        nodes, value, covariance, spread, table, label, solution.scale if solution is not None else np.nan, strength
+        lines, surveys, nodes, points, network, table, posterior, found, data, rows, applied, heading_mean, neglected
     )
 
 
-def rms(values) -> float | None:
-    """Return the root mean square of the finite values, None without any."""
-    values = np.asarray(values, float)
-    values = values[np.isfinite(values)]
-    return float(np.sqrt(np.mean(values**2))) if len(values) else None
+def nodes_of(lines: pd.DataFrame, settings: Levelling) -> Nodes:
+    """Place the nodes of the lines: closely where corrections may drift, else one a line."""
+    constant = settings.line_drift == settings.time_drift == "off"
+    spacing = None if constant else settings.knots_h
+    return joint.place_nodes(lines["start_utc"].to_numpy(), lines["end_utc"].to_numpy(), spacing)
 
 
-def line_statistics(levels: Levels, lines: pd.DataFrame, held: np.ndarray) -> pd.DataFrame:
-    """Say for each line its correction and how its crossings fit before, after, and left out.
+def _with_results(crossings, rows, sign, posterior, first, second, m) -> pd.DataFrame:
+    """Add to the table of crossings what the adjustment says of each."""
+    residual, left_out, weight = (np.full(len(crossings), np.nan) for _ in range(3))
+    status = crossings["status"].to_numpy(object).copy()
+    rejected = posterior.weight <= 0
+    alone = joint.lonely(first, second, posterior.weight > 0, m)
+    residual[rows] = np.where(rejected, np.nan, sign * posterior.residual)
+    left_out[rows] = np.where(rejected | alone, np.nan, sign * posterior.left_out)
+    weight[rows] = posterior.weight
+    deviation = np.abs(posterior.left_out) / np.sqrt(np.maximum(posterior.left_out_variance, 1e-12))
+    if rejected.any():
+        texts = [f"does not fit the others: off by {abs(e):.1f} nT" for e in posterior.left_out[rejected]]
+        for row, text, size in zip(rows[rejected], texts, deviation[rejected], strict=True):
+            status[row] = f"{text}, {size:.0f} sigma" if np.isfinite(size) else text
+    return crossings.assign(residual_nt=residual, left_out_nt=left_out, weight=weight, status=status)
+
+
+def _navigation_share(positions, settings, one: Points, two: Points) -> np.ndarray:
+    """Return the part of the variance of positions that is not the layback's, where that is modelled."""
+    share = np.ones(int(max(one.survey.max(), two.survey.max())) + 1)
+    if settings.layback == "off" and "layback" not in settings.apply:
+        return share[one.survey]
+    for s, record in enumerate((positions or [])[: len(share)]):
+        own = record.get("settings", {})
+        if own and own.get("layback", {}).get("model") != "none":
+            fix, tow = own["sigma_navigation_m"] ** 2, own["sigma_layback_m"] ** 2
+            share[s] = fix / (fix + tow)
+    return (share[one.survey] + share[two.survey]) / 2
+
+
+def read_survey(job: stage.Job, number: int, tow: bool) -> dict[str, np.ndarray]:
+    """Read what the adjustment needs of the readings of one survey.
 
     Returns
     -------
-    pandas.DataFrame
-        survey, line, kind, network, level_nt and sigma_level_nt at the line's middle, crossings, rms_before_nt,
-        rms_after_nt, rms_left_out_nt, status.
+    dict of str to array
+        line_index, time_utc, effects (n, 7), sigma_diurnal_nt, sigma_heading_nt.
 
     """
-    m = len(lines)
-    middle = lines["start_utc"] + (lines["end_utc"] - lines["start_utc"]) / 2
-    at_middle = levels.nodes.design(np.arange(m), middle.to_numpy().astype("datetime64[ns]"))
-    first, second = line_numbers(levels.crossings, lines)
-    used = np.isfinite(levels.crossings["residual_nt"].to_numpy())
-    line = np.concatenate([first[used], second[used]])
-    columns = {}
-    for name in ("mismatch", "residual", "left_out"):
-        values = np.tile(levels.crossings[f"{name}_nt"].to_numpy(float)[used], 2)
-        there = np.isfinite(values)
-        count = np.bincount(line[there], minlength=m)
-        with np.errstate(invalid="ignore"):
-            columns[name] = np.sqrt(np.bincount(line[there], values[there] ** 2, minlength=m) / count)
-    count = np.bincount(line, minlength=m)
-    status = np.where(levels.network < 0, "no usable crossing", np.where(held, "held at zero", "levelled"))
-    if levels.covariance is not None:
-        clean = np.nan_to_num(levels.covariance)
-        variance = np.einsum("ij,ij->i", (at_middle @ clean), at_middle.toarray()) if m <= 2000 else None
-    else:
-        variance = None
-    sigma = at_middle @ levels.sigma_nt if variance is None else np.sqrt(np.maximum(variance, 0.0))
-    return pd.DataFrame(
-        {
-            "survey": lines["survey"],
-            "line": lines["line"],
-            "kind": lines["kind"],
-            "network": levels.network,
-            "level_nt": at_middle @ levels.value_nt,
-            "sigma_level_nt": np.where(levels.network < 0, np.nan, sigma),
-            "crossings": count,
-            "rms_before_nt": columns["mismatch"],
-            "rms_after_nt": columns["residual"],
-            "rms_left_out_nt": columns["left_out"],
-            "status": status,
-        }
-    )
+
+    def column(name, *columns):
+        table = pd.read_parquet(job.inputs[name][number], columns=list(columns))
+        return [table[c].to_numpy() for c in columns]
+
+    (line_index,), (time_utc,) = column("lines", "line_index"), column("readings", "time_utc")
+    diurnal, sigma_diurnal = column("diurnal", "diurnal_nt", "sigma_diurnal_nt")
+    heading, sigma_heading = column("heading", "heading_nt", "sigma_heading_nt")
+    direction, ship = column("position", "tow_direction_deg", "ship_heading_deg")
+    effects = np.full((len(line_index), len(EFFECTS)), np.nan)
+    effects[:, :4] = joint.harmonics(direction if tow else ship)
+    effects[:, 4] = diurnal
+    if job.settings.apply:
+        lat, lon, course, speed = column(
+            "position", "sensor_latitude_deg", "sensor_longitude_deg", "sensor_course_deg", "sensor_speed_mps"
+        )
+        (total,), (main_field,) = column("readings", "total_field_nt"), column("main_field", "main_field_nt")
+        (flags,) = column("screen", "screen_flags")
+        anomaly = total - main_field
+        for term in (diurnal, heading):
+            anomaly = anomaly - np.where(np.isfinite(term).any(), term, 0.0)
+        slope = joint.along_track_gradient(lat, lon, np.where(rejected(flags), np.nan, anomaly), line_index)
+        effects[:, 5] = -slope * np.nan_to_num(np.cos(np.radians(direction - course)), nan=1.0)
+        effects[:, 6] = slope * speed
+    return {
+        "line_index": line_index,
+        "time_utc": time_utc,
+        "effects": effects,
+        "sigma_diurnal_nt": sigma_diurnal,
+        "sigma_heading_nt": sigma_heading,
+    }
 
 
-def at_readings(levels: Levels, offset: int, line_index: np.ndarray, time_utc: np.ndarray) -> pd.DataFrame:
-    """Interpolate the corrections to the readings of one survey.
+def along_lines(lines: pd.DataFrame, survey: int, nodes: Nodes, readings: dict) -> tuple[np.ndarray, np.ndarray]:
+    """Return the mean effects over each line of a survey, and the sigma of the diurnal term at the survey's nodes.
 
     Parameters
     ----------
-    levels : Levels
-        Corrections of all lines.
-    offset : int
-        Row of the survey's first line in the table of all lines.
-    line_index : array of int, shape (n,)
-        Line of each reading within the survey, -1 for none.
-    time_utc : array of datetime64[ns], shape (n,)
-        Times of the readings.
+    lines : pandas.DataFrame
+        In canonical order.
+    survey : int
+    nodes : Nodes
+    readings : dict
+        From `read_survey`.
 
     Returns
     -------
-    pandas.DataFrame
-        level_nt (subtracted), sigma_level_nt, level_flags.
+    means : array, shape (lines of the survey, 7)
+    sigma : array, shape (nodes of the survey,)
+        NaN where no reading near in time has a diurnal term.
 
     """
-    n = len(line_index)
-    value, sigma = np.full(n, np.nan), np.full(n, np.nan)
-    on = np.flatnonzero(line_index >= 0)
-    if len(on) and len(levels.nodes.line):
-        first, share = levels.nodes.between(line_index[on] + offset, time_utc[on])
-        following = np.minimum(first + (share > 0), len(levels.nodes.line) - 1)
-        value[on] = (1 - share) * levels.value_nt[first] + share * levels.value_nt[following]
-        if levels.covariance is None:
-            sigma[on] = (1 - share) * levels.sigma_nt[first] + share * levels.sigma_nt[following]
-        else:
-            c = levels.covariance
-            variance = (1 - share) ** 2 * c[first, first] + share**2 * c[following, following]
-            sigma[on] = np.sqrt(np.maximum(variance + 2 * share * (1 - share) * c[first, following], 0.0))
-    flags = np.where(np.isnan(value), np.uint32(Flag.NO_LEVEL), np.uint32(0)).astype("uint32")
-    return pd.DataFrame({"level_nt": value, "sigma_level_nt": sigma, "level_flags": flags})
-
-
-def _say(job: stage.Job, levels: Levels, lines: pd.DataFrame, table: pd.DataFrame) -> None:
-    """Write statistics into the record, and sentences for what deserves a look."""
-    crossings = levels.crossings
-    used = np.isfinite(crossings["residual_nt"].to_numpy(float))
-    rejected = (levels.crossings["weight"] == 0).to_numpy()
-    before, after = rms(crossings["mismatch_nt"][used]), rms(crossings["residual_nt"])
-    left_out = rms(crossings["left_out_nt"])
-    several = lines["survey"].nunique() > 1
-    names = (lines["survey"] + "/" + lines["line"] if several else lines["line"]).to_numpy()
-    lost = np.flatnonzero((levels.network < 0) & lines["kind"].isin(["line", "tie"]).to_numpy())
-    if not used.any():
-        job.note("There is no usable crossing: no line can be levelled, and the level term is missing everywhere.")
-    elif len(lost):
-        listed = ", ".join(names[lost][:10]) + (f" and {len(lost) - 10} more" if len(lost) > 10 else "")
-        job.note(f"Without a usable crossing, and so without a level term: {listed}.")
-    parts = int(levels.network.max(initial=-1)) + 1
-    if parts > 1:
-        sizes = np.bincount(levels.network[levels.network >= 0])
-        job.note(
-            f"The lines fall into {parts} networks that no crossing connects ({', '.join(map(str, sizes[:8]))} lines): "
-            "their levels against each other are unknown."
-        )
-    if rejected.any():
-        job.note(
-            f"{int(rejected.sum())} of {int(used.sum() + rejected.sum())} crossings do not fit the others "
-            "and are left out."
-        )
-    job.record |= {
-        "crossings": len(crossings),
-        "crossings_used": int(used.sum()),
-        "crossings_rejected": int(rejected.sum()),
-        "rms_before_nt": before,
-        "rms_after_nt": after,
-        "rms_left_out_nt": left_out,
-        "networks": parts,
-        "scale": levels.scale if np.isfinite(levels.scale) else None,
-        "drift_nt_per_root_hour": levels.drift_nt_per_root_hour,
-        "lines_without_level": [str(name) for name in names[lost]],
-    }
-    if before is None:
-        job.done("no line levelled")
-    else:
-        left = "unknown" if left_out is None else f"{left_out:.2f} nT"
-        job.done(
-            f"{int((table['status'] == 'levelled').sum())} lines levelled at {int(used.sum())} crossings: "
-            f"rms {before:.2f} nT before, {after:.2f} nT after, {left} left out"
-        )
+    own = lines[lines["survey_number"] == survey]
+    on = np.flatnonzero(readings["line_index"] >= 0)
+    index = readings["line_index"][on]
+    count = max(int(own["row"].max() - own["row"].min()) + 1, int(index.max(initial=-1)) + 1)
+    there = np.nan_to_num(readings["effects"][on])
+    number = np.maximum(np.bincount(index, minlength=count), 1)
+    means = np.column_stack([np.bincount(index, part, minlength=count) / number for part in there.T])
+    mine = np.isin(nodes.line, own.index.to_numpy())
+    time = readings["time_utc"].astype("datetime64[ns]").astype("int64")
+    wanted = nodes.time_utc[mine].astype("int64")
+    sigma = np.full(len(wanted), np.nan)
+    if len(time):
+        near = np.clip(np.searchsorted(time, wanted), 1, max(len(time) - 1, 1))
+        near = np.where(wanted - time[near - 1] < time[np.minimum(near, len(time) - 1)] - wanted, near - 1, near)
+        sigma = readings["sigma_diurnal_nt"][np.minimum(near, len(time) - 1)]
+    return means[(own["row"] - own["row"].min()).to_numpy()], sigma
 
 
 def main(job: stage.Job) -> None:
@@ -434,36 +341,44 @@ def main(job: stage.Job) -> None:
     tables = [
         pd.read_parquet(path).assign(survey=key) for key, path in zip(members, job.inputs["line_table"], strict=True)
     ]
-    lines = pd.concat(tables, ignore_index=True)
+    lines = in_order(pd.concat(tables, ignore_index=True))
+    keys = list(dict.fromkeys(lines["survey"]))
+    numbers = [members.index(key) for key in keys]  # place among the inputs of each survey number
+    records = [
+        [json.loads(job.inputs[name][k].read_text(encoding="utf-8")) for k in numbers]
+        for name in ("heading_record", "position_record")
+    ]
+    tow = [record.get("settings", {}).get("angle") == "tow_direction" for record in records[0]]
     held = held_lines(job.settings.hold, job.edits, lines)
-    if "hold" in lines:
-        held |= lines["hold"].fillna(False).to_numpy(bool)
+    nodes = nodes_of(lines, job.settings)
+    means, sigma = np.zeros((len(lines), len(EFFECTS))), np.full(len(nodes), np.nan)
+    survey_of_node = lines["survey_number"].to_numpy()[nodes.line] if len(lines) else np.empty(0, int)
+    for s, k in enumerate(numbers):
+        found = along_lines(lines, s, nodes, read_survey(job, k, tow[s]))
+        means[lines["survey_number"] == s], sigma[survey_of_node == s] = found
     levels = level(
         job.table("crossovers"),
         lines,
+        settings=job.settings,
         held=held,
-        model=job.settings.model,
-        knots_h=job.settings.knots_h,
-        robust=job.settings.robust,
+        sigma_diurnal_nt=sigma,
+        line_means=means,
+        headings=records[0],
+        positions=records[1],
     )
-    offset = 0
-    for key, table, readings, index in zip(members, tables, job.inputs["readings"], job.inputs["lines"], strict=True):
-        time_utc = pd.read_parquet(readings, columns=["time_utc"])["time_utc"].to_numpy()
-        line_index = pd.read_parquet(index, columns=["line_index"])["line_index"].to_numpy()
-        job.write("levelling", at_readings(levels, offset, line_index, time_utc), member=key)
-        offset += len(table)
-    statistics = line_statistics(levels, lines, held)
+    for key, k in zip(members, range(len(members)), strict=True):
+        s = keys.index(key) if key in keys else -1
+        readings = read_survey(job, k, s >= 0 and tow[s])
+        job.write("levelling", at_readings(levels, s, settings=job.settings, **readings), member=key)
+    statistics = line_statistics(levels, held)
     job.write("levelling_lines", statistics)
     job.write("levelling_crossovers", levels.crossings)
-    np.savez(
-        job.target("level_covariance"),
-        survey=lines["survey"].to_numpy(str)[levels.nodes.line],
-        line=lines["line"].to_numpy(str)[levels.nodes.line],
-        time_utc=levels.nodes.time_utc.astype("int64"),
-        level_nt=levels.value_nt,
-        covariance_nt2=levels.covariance if levels.covariance is not None else np.empty((0, 0)),
-    )
-    _say(job, levels, lines, statistics)
+    write_covariance(job.target("level_covariance"), levels)
+    record, notes, done = determined.sum_up(levels, statistics, job.settings)
+    job.record |= record
+    for sentence in notes:
+        job.note(sentence)
+    job.done(done)
 
 
 if __name__ == "__main__":

@@ -20,6 +20,7 @@ class Section(BaseModel):
 
 Files = Annotated[list[str], Field(min_length=1, description="files or patterns, relative to the survey's folder")]
 Kind = Literal["line", "tie", "calibration", "transit"]
+Term = Literal["auto", "on", "off"]
 
 
 # -- the survey ------------------------------------------------------------------------------------------------------
@@ -318,12 +319,37 @@ class Crossovers(Section):
 
 
 class Levelling(Section):
-    """Adjustment of the lines to each other at their crossings."""
+    """Adjustment of the lines, and of the other corrections, to each other at the crossings.
 
-    model: Literal["constant", "drift"] = Field(
-        "constant", description="correction of a line: constant, or with drift in time"
+    A term is off, on, or kept only if it lowers the leave-one-out figure of the crossings (auto).
+    """
+
+    line_drift: Term = Field("auto", description="drift of each line: linear, and smooth in time")
+    time_drift: Term = Field(
+        "auto", description="drift in time common to all lines of a survey: what is left of the external field"
     )
-    knots_h: float = Field(3.0, gt=0, description="drift: time between the knots")
+    heading: Term = Field("auto", description="heading harmonics, with the calibration as prior")
+    diurnal_scale: Term = Field("auto", description="scale on the variation of the base stations")
+    layback: Term = Field("auto", description="error of the layback, of all lines alike")
+    clock: Term = Field("auto", description="error of the logger's clock")
+    apply: list[Literal["layback", "clock"]] = Field(
+        [], description="position errors that are not only estimated but corrected for"
+    )
+    drift_scales_h: Annotated[list[Annotated[float, Field(gt=0.05, le=1000)]], Field(min_length=1, max_length=4)] = (
+        Field([1.5, 6.0], description="drifts: correlation times, h; the variance of each is estimated")
+    )
+    knots_h: float = Field(0.25, ge=0.01, le=1000, description="drifts: longest time between the knots, h")
+    sigma_heading_nt: float = Field(
+        10.0, gt=0, le=1000, description="expected size of a heading coefficient without calibration, nT"
+    )
+    sigma_diurnal_scale: float = Field(
+        0.1, gt=0, le=1, description="expected departure from 1 of the scale on the base stations' variation"
+    )
+    sigma_layback_m: float = Field(15.0, gt=0, le=1000, description="expected error of the layback, m")
+    sigma_clock_s: float = Field(1.5, gt=0, le=1000, description="expected error of the logger's clock, s")
+    sigma_without_base_nt: float = Field(
+        20.0, gt=0, le=2000, description="expected size of the external variation where no base station tells it, nT"
+    )
     robust: bool = Field(True, description="weigh down and then reject crossings that do not fit")
     hold: list[str] = Field(
         [], description="lines whose correction is held at zero; empty: weighted mean zero per network"

@@ -1,0 +1,289 @@
+"""What levelling found, taken to readings and to lines: corrections, sigmas, statistics, covariances."""
+
+from dataclasses import dataclass, field
+
+import numpy as np
+import pandas as pd
+
+from steps.collocation import EFFECTS, Crossings, Points
+from steps.columns import TABLES, Flag
+from steps.joint import PASSES, Fit, Nodes
+from steps.posterior import Posterior
+from steps.settings import Levelling
+
+LEVELLING = TABLES["levelling"]
+WRITTEN = 1500  # nodes whose covariance is written whole; beyond it, one node a line
+
+
+@dataclass(frozen=True)
+class Levels:
+    """Result of `level`.
+
+    Attributes
+    ----------
+    lines : pandas.DataFrame
+        All lines in canonical order, with ``row`` (their place in the input) and ``survey_number``.
+    surveys : list of str
+        Keys of the surveys in order of ``survey_number``.
+    nodes : Nodes
+    points : Points
+        The nodes as points.
+    network : array of int, shape (m,)
+        Network of each line, -1 for none.
+    crossings : pandas.DataFrame
+        The rows given, with residual_nt, left_out_nt, weight, and the status of the rejected changed.
+    posterior : Posterior or None
+        None without any usable crossing.
+    fit : Fit or None
+    data : Crossings or None
+        The usable crossings, in canonical order.
+    order : array of int, shape (n,)
+        Their rows in `crossings`.
+    applied : array of bool, shape (7,)
+        Which coefficients change the terms of the readings.
+    heading_mean : array, shape (surveys, 4)
+        Prior mean of the change of the heading coefficients.
+    neglected : array, shape (M,)
+        Variance at the nodes, nT^2, of drifts that are left out.
+
+    """
+
+    lines: pd.DataFrame
+    surveys: list
+    nodes: Nodes
+    points: Points
+    network: np.ndarray
+    crossings: pd.DataFrame
+    posterior: Posterior | None = field(repr=False)
+    fit: Fit | None = field(repr=False)
+    data: Crossings | None = field(repr=False)
+    order: np.ndarray = field(repr=False)
+    applied: np.ndarray
+    heading_mean: np.ndarray
+    neglected: np.ndarray
+
+
+def line_numbers(crossings: pd.DataFrame, lines: pd.DataFrame) -> tuple[np.ndarray, np.ndarray]:
+    """Return the rows in the table of lines of both passes of each crossing; -1 where a line is not in it."""
+    known = pd.Index(lines["survey"] + "\0" + lines["line"])
+    first, second = (
+        known.get_indexer(crossings[f"survey{p}"].astype(str) + "\0" + crossings[f"line{p}"].astype(str))
+        for p in PASSES
+    )
+    return first, second
+
+
+def rms(values) -> float | None:
+    """Return the root mean square of the finite values, None without any."""
+    values = np.asarray(values, float)
+    values = values[np.isfinite(values)]
+    return float(np.sqrt(np.mean(values**2))) if len(values) else None
+
+
+def _datum_of(levels: Levels, line: np.ndarray) -> np.ndarray:
+    network = levels.network[line]
+    return np.where(network >= 0, levels.posterior.datum[np.maximum(network, 0)], np.nan)
+
+
+def level_at(levels: Levels, line: np.ndarray, time_utc: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Return the level term of instants on lines, and its sigma, datum left out; NaN where it is missing.
+
+    Parameters
+    ----------
+    levels : Levels
+    line : array of int, shape (n,)
+        Row in ``levels.lines``.
+    time_utc : array of datetime64[ns], shape (n,)
+
+    """
+    if levels.posterior is None:
+        return np.full(len(line), np.nan), np.full(len(line), np.nan)
+    p = levels.posterior
+    first, share = levels.nodes.between(line, time_utc)
+    following = np.minimum(first + (share > 0), len(levels.nodes) - 1)
+    network = levels.network[line]
+    loose = levels.points.loose[first]
+    value = (1 - share) * p.value[first] + share * p.value[following] - loose * _datum_of(levels, line)
+    variance = _between(p.variance, p.following, first, following, share)
+    with_datum = (1 - share) * p.datum_level_nodes[first] + share * p.datum_level_nodes[following]
+    variance = variance - 2 * with_datum + p.datum_level_variance[np.maximum(network, 0)]
+    sigma = np.sqrt(np.maximum(variance, 0.0)) * (loose > 0)
+    return np.where(network >= 0, value, np.nan), np.where(network >= 0, sigma, np.nan)
+
+
+def _between(variance, covariance, first, following, share):
+    """Interpolate a variance between nodes, the covariance of neighbours included."""
+    other = 1 - share
+    return other**2 * variance[first] + share**2 * variance[following] + 2 * share * other * covariance[first]
+
+
+def at_readings(
+    levels: Levels,
+    survey: int,
+    line_index: np.ndarray,
+    time_utc: np.ndarray,
+    *,
+    effects: np.ndarray | None = None,
+    sigma_diurnal_nt: np.ndarray | None = None,
+    sigma_heading_nt: np.ndarray | None = None,
+    settings: Levelling,
+) -> pd.DataFrame:
+    """Take the corrections to the readings of one survey.
+
+    Parameters
+    ----------
+    levels : Levels
+    survey : int
+        Survey number.
+    line_index : array of int, shape (n,)
+        Line of each reading as a row of the survey's own table of lines, -1 for none.
+    time_utc : array of datetime64[ns], shape (n,)
+    effects : array, shape (n, 7), optional
+        What a unit of each coefficient adds to the anomaly of each reading; NaN where unknown.
+    sigma_diurnal_nt, sigma_heading_nt : array, shape (n,), optional
+        Of the earlier stages; used where levelling does not adjust those terms.
+    settings : Levelling
+
+    Returns
+    -------
+    pandas.DataFrame
+        level_nt (subtracted), sigma_level_nt, heading_change_nt and diurnal_change_nt (to be added to those terms; NaN
+        where they stay as they are), position_change_nt (what an applied error of layback or clock does to the anomaly
+        at the position given; part of level_nt), sigma_joint_nt (of diurnal, heading and level together),
+        sigma_datum_nt, level_flags.
+
+    """
+    n = len(line_index)
+    own = levels.lines[levels.lines["survey_number"] == survey].sort_values("row")
+    line = np.full(n, -1)
+    on = np.flatnonzero(line_index >= 0)
+    line[on] = own.index.to_numpy()[line_index[on]]
+    found = {name: np.full(n, np.nan) for name in LEVELLING if name != "level_flags"}
+    if levels.posterior is not None and len(on):
+        p, where = levels.posterior, line[on]
+        network = levels.network[where]
+        value, found["sigma_level_nt"][on] = level_at(levels, where, time_utc[on])
+        given = np.full((n, len(EFFECTS)), np.nan) if effects is None else effects
+        loose = levels.points.loose[np.searchsorted(levels.nodes.line, where)]
+        coefficients = p.effects[survey].copy()
+        coefficients[:4] += levels.heading_mean[survey] * levels.applied[0]
+        change = given[on] * coefficients * np.where(levels.applied, 1.0, np.nan) * loose[:, None]
+        found["heading_change_nt"][on] = change[:, :4].sum(axis=1)
+        found["diurnal_change_nt"][on] = change[:, 4]
+        shift = np.nan_to_num(change[:, 5:]).sum(axis=1)
+        found["position_change_nt"][on] = np.where(levels.applied[5:].any(), shift, np.nan)
+        found["level_nt"][on] = value + shift
+        found["sigma_datum_nt"][on] = np.where(network >= 0, np.sqrt(p.datum_variance[np.maximum(network, 0)]), np.nan)
+        there = np.nan_to_num(given[on]) * levels.applied
+        variance = _joint_variance(levels, survey, where, time_utc[on], there, loose)
+        for term, sigma in (("time_drift", sigma_diurnal_nt), ("heading", sigma_heading_nt)):
+            if getattr(settings, term) == "off" and sigma is not None:
+                variance = variance + np.nan_to_num(sigma[on]) ** 2
+        found["sigma_joint_nt"][on] = np.where(network >= 0, np.sqrt(np.maximum(variance, 0.0)), np.nan)
+    flags = np.where(np.isnan(found["level_nt"]), np.uint32(Flag.NO_LEVEL), np.uint32(0)).astype("uint32")
+    return pd.DataFrame({**found, "level_flags": flags})[list(LEVELLING)]
+
+
+def _joint_variance(levels, survey, line, time_utc, effects, loose):
+    """Return the variance of level and changes together, the datum left out."""
+    p = levels.posterior
+    first, share = levels.nodes.between(line, time_utc)
+    following = np.minimum(first + (share > 0), len(levels.nodes) - 1)
+    network = np.maximum(levels.network[line], 0)
+    used = np.flatnonzero(levels.applied)
+    variance = _between(p.variance, p.following, first, following, share) + p.datum_variance[network]
+    variance -= 2 * ((1 - share) * p.datum_nodes[first] + share * p.datum_nodes[following])
+    for j in used:
+        variance += 2 * effects[:, j] * ((1 - share) * p.mixed[first, j] + share * p.mixed[following, j])
+        variance -= 2 * effects[:, j] * p.datum_effects[line, j]
+        for i in used:
+            variance += effects[:, i] * effects[:, j] * p.effects_covariance[survey, i, j]
+    neglected = (1 - share) * levels.neglected[first] + share * levels.neglected[following]
+    return (variance + neglected) * loose
+
+
+def line_statistics(levels: Levels, held: np.ndarray) -> pd.DataFrame:
+    """Say for each line its correction and how its crossings fit before, after, and left out.
+
+    Parameters
+    ----------
+    levels : Levels
+    held : array of bool, shape (m,)
+        In canonical order.
+
+    Returns
+    -------
+    pandas.DataFrame
+        survey, line, kind, network, level_nt and sigma_level_nt at the line's middle, crossings, rms_before_nt,
+        rms_after_nt, rms_left_out_nt, status; in the order of the input.
+
+    """
+    lines = levels.lines
+    m = len(lines)
+    start, end = (lines[name].to_numpy().astype("datetime64[ns]") for name in ("start_utc", "end_utc"))
+    value, sigma = level_at(levels, np.arange(m), start + (end - start) // 2)
+    first, second = line_numbers(levels.crossings, lines)
+    used = np.isfinite(levels.crossings["residual_nt"].to_numpy())
+    line = np.concatenate([first[used], second[used]])
+    columns = {}
+    for name in ("mismatch", "residual", "left_out"):
+        values = np.tile(levels.crossings[f"{name}_nt"].to_numpy(float)[used], 2)
+        there = np.isfinite(values)
+        count = np.bincount(line[there], minlength=m)
+        with np.errstate(invalid="ignore"):
+            columns[name] = np.sqrt(np.bincount(line[there], values[there] ** 2, minlength=m) / count)
+    status = np.where(levels.network < 0, "no usable crossing", np.where(held, "held at zero", "levelled"))
+    table = pd.DataFrame(
+        {
+            "survey": lines["survey"],
+            "line": lines["line"],
+            "kind": lines["kind"],
+            "network": levels.network,
+            "level_nt": value,
+            "sigma_level_nt": sigma,
+            "crossings": np.bincount(line, minlength=m),
+            "rms_before_nt": columns["mismatch"],
+            "rms_after_nt": columns["residual"],
+            "rms_left_out_nt": columns["left_out"],
+            "status": status,
+        }
+    )
+    return table.iloc[np.argsort(lines["row"].to_numpy(), kind="stable")].reset_index(drop=True)
+
+
+def write_covariance(path, levels: Levels) -> None:
+    """Write the covariance of the level terms between lines, with its index, as a NumPy archive.
+
+    ``survey, line, time_utc`` (nanoseconds since 1970) say to which line and instant each row belongs;
+    ``covariance_nt2`` is the covariance, the datum of each network left out, or, for very many lines, ``factor_nt`` one
+    whose rows have the products ``factor factor' / columns``.
+    """
+    lines, nodes, p = levels.lines, levels.nodes, levels.posterior
+    content = {}
+    rows = np.empty(0, int)
+    if p is not None:
+        inside = np.flatnonzero(levels.network[nodes.line] >= 0)
+        rows = inside
+        if p.covariance is None or len(inside) > WRITTEN:  # one node a line
+            starts = np.searchsorted(nodes.line, np.arange(len(lines)))
+            stops = np.searchsorted(nodes.line, np.arange(len(lines)), side="right")
+            rows = ((starts + stops) // 2)[(levels.network >= 0) & (stops > starts)]
+        network = levels.network[nodes.line[rows]]
+        loose = levels.points.loose[rows]
+        if p.covariance is not None:
+            c = p.covariance[np.ix_(rows, rows)]
+            same = network[:, None] == network[None, :]
+            with_datum = p.datum_level_nodes[rows]
+            c = c - (with_datum[:, None] + with_datum[None, :] - p.datum_level_variance[network][:, None]) * same
+            content["covariance_nt2"] = c * loose[:, None] * loose[None, :]
+        elif p.factor is not None:
+            factor = p.factor[rows]
+            weight = levels.lines["readings"].to_numpy(float)[nodes.line[rows]]
+            mean = np.stack([np.bincount(network, weight * part) for part in factor.T], axis=1)
+            content["factor_nt"] = factor - (mean / np.bincount(network, weight)[:, None])[network]
+    content |= {
+        "survey": lines["survey"].to_numpy(str)[nodes.line[rows]],
+        "line": lines["line"].to_numpy(str)[nodes.line[rows]],
+        "time_utc": nodes.time_utc[rows].astype("int64"),
+    }
+    np.savez_compressed(path, **content)
