@@ -45,11 +45,9 @@ def raw_problems(member: survey.Member) -> list[str]:
         for file in member.raw_inputs("ingest")[f"navigation_{number}"]:
             attempt(ingest.read_navigation, [source], {"navigation_0": [Path(file)]})
     for file in member.raw_inputs("lines").get("log", []):
-        kinds = {"line": "text", "kind": "text", "start_utc": "time", "end_utc": "time"}
-        attempt(lambda path: lines.check_log(tables.read_table(path, kinds), path), file)
+        attempt(lambda path: lines.check_log(tables.read_table(path, lines.LOG), path), file)
     for file in member.raw_inputs("position").get("cable", []):
-        kinds = {"time_utc": "time", "cable_out_m": "number"}
-        attempt(lambda path: position.check_cable(tables.read_table(path, kinds), path), file)
+        attempt(lambda path: position.check_cable(tables.read_table(path, position.CABLE_LOG), path), file)
     for number, source in enumerate(own.diurnal.base_stations):
         from steps import diurnal
 

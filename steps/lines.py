@@ -12,6 +12,7 @@ from steps import edits, stage
 from steps.errors import SurveyError, mistake
 from steps.settings import Lines
 
+LOG = {"line": "text", "kind": "text", "start_utc": "time", "end_utc": "time"}  # columns of the line log
 KINDS = ("line", "tie", "calibration", "transit")
 EARTH_RADIUS_M = 6371008.8  # mean radius of WGS 84; courses and lengths of lines need no more
 
@@ -202,8 +203,7 @@ def main(job: stage.Job) -> None:
         from steps.provenance import checksum
 
         path = job.path("log")
-        kinds = {"line": "text", "kind": "text", "start_utc": "time", "end_utc": "time"}
-        table = check_log(tables.read_table(path, kinds), str(path))
+        table = check_log(tables.read_table(path, LOG), str(path))
         job.record["line_log"] = {"file": str(path), "sha256": checksum(path), "lines": len(table)}
     else:
         fixes = job.table("navigation", ["time_utc", "latitude_deg", "longitude_deg"])

@@ -21,6 +21,7 @@ from steps.columns import Flag
 from steps.errors import SurveyError, mistake
 from steps.settings import Layback, Position
 
+CABLE_LOG = {"time_utc": "time", "cable_out_m": "number"}  # columns of the cable log
 COARSEST_CLOCK_S, FINEST_CLOCK_S = 10.0, 0.2
 SETTLED = 0.05  # share of the unknown first direction of the cable that may be left
 SLACK_M = 10.0  # what a good fix may be off
@@ -598,8 +599,7 @@ def main(job: stage.Job) -> None:
         from steps.provenance import checksum
 
         path = job.path("cable")
-        kinds = {"time_utc": "time", "cable_out_m": "number"}
-        log = check_cable(tables.read_table(path, kinds), str(path))
+        log = check_cable(tables.read_table(path, CABLE_LOG), str(path))
         job.record["cable_log"] = {"file": str(path), "sha256": checksum(path), "rows": len(log)}
     starts, ends = table["start_utc"].to_numpy(), table["end_utc"].to_numpy()
     names = {"line_names": table["line"].tolist()}
