@@ -433,8 +433,8 @@ def as_csv(profile: pd.DataFrame, header: list[str]) -> bytes:
             decimals = PLACE_DECIMALS if name.endswith(("latitude_deg", "longitude_deg")) else DECIMALS[column.unit]
             columns[name] = pa.array(np.round(values.to_numpy(), decimals) + 0.0, from_pandas=True)
     memory = io.BytesIO()
-    memory.write("\n".join([*header, *explained, ""]).encode("utf-8"))
-    csv.write_csv(pa.table(columns), memory, csv.WriteOptions(quoting_style="none"))
+    memory.write("\n".join([*header, *explained, ",".join(columns), ""]).encode("utf-8"))
+    csv.write_csv(pa.table(columns), memory, csv.WriteOptions(include_header=False, quoting_style="none"))
     return memory.getvalue()
 
 
