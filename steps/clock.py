@@ -18,6 +18,7 @@ LEAP_SECONDS_UTC = np.array(
 )
 NS_PER_S = 1_000_000_000
 NS_PER_DAY = 86_400 * NS_PER_S
+YEARS = (1900, 2200)  # of any time that is read: IGRF begins in 1900, datetime64[ns] ends in 2262
 
 
 def gps_to_utc(time: np.ndarray) -> np.ndarray:
@@ -75,3 +76,36 @@ def _naive_utc(instant):
     if instant.tzinfo is None:
         return instant
     return (instant - instant.utcoffset()).replace(tzinfo=None)
+
+
+def midnights(year: np.ndarray, month: np.ndarray, day: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Find the beginning of calendar days.
+
+    Parameters
+    ----------
+    year, month, day : array of int, shape (n,)
+        Year in full; month and day counting from 1.
+
+    Returns
+    -------
+    ns : array of int64, shape (n,)
+        Nanoseconds since 1970; 0 where there is no such day.
+    good : array of bool, shape (n,)
+        False where there is no such day, or it is not in `YEARS`.
+
+    """
+    if len(year) == 0:
+        return np.zeros(0, np.int64), np.zeros(0, bool)
+    code = (year.astype(np.int32) * 100 + month) * 100 + day
+    begins = np.concatenate([[0], np.flatnonzero(code[1:] != code[:-1]) + 1])
+    y, m, d = (
+        part[begins].astype(np.int64) for part in (year, month, day)
+    )  # days change seldom: look once at each run
+    good = (y >= YEARS[0]) & (y < YEARS[1]) & (m >= 1) & (m <= 12) & (d >= 1) & (d <= 31)
+    y, m, d = np.where(good, y, 1970), np.where(good, m, 1), np.where(good, d, 1)
+    first = (y - 1970).astype("datetime64[Y]").astype("datetime64[M]") + (m - 1).astype("timedelta64[M]")
+    date = first.astype("datetime64[D]") + (d - 1).astype("timedelta64[D]")
+    good &= date.astype("datetime64[M]") == first
+    ns = np.where(good, date.astype("datetime64[ns]").astype(np.int64), 0)
+    lengths = np.diff(np.append(begins, len(code)))
+    return np.repeat(ns, lengths), np.repeat(good, lengths)

@@ -4,6 +4,8 @@ What is physical about a particular survey has no default; choices of method do.
 before any work, and every mistake is told at once with its line.
 """
 
+import codecs
+import re
 from datetime import datetime
 from typing import Annotated, Literal
 
@@ -18,6 +20,7 @@ class Section(BaseModel):
     model_config = ConfigDict(frozen=True, extra="forbid", allow_inf_nan=False)
 
 
+Cell = Annotated[str, Field(coerce_numbers_to_str=True)]
 Files = Annotated[list[str], Field(min_length=1, description="files or patterns, relative to the survey's folder")]
 Kind = Literal["line", "tie", "calibration", "transit"]
 Term = Literal["auto", "on", "off"]
@@ -43,7 +46,11 @@ class Clock(Section):
     """How an instrument's clock stood against UTC; correction is added to the logged time."""
 
     time_scale: Literal["utc", "gps"] = Field("utc", description="scale the instrument stamps in")
-    offset_s: float = Field(ge=-1e6, le=1e6, description="seconds to add to the logged time to get it right")
+    offset_s: float = Field(
+        ge=-1.3e9,
+        le=1.3e9,
+        description="seconds to add to the logged time to get it right; a week rollover of GNSS is 619315200",
+    )
     drift_s_per_day: float = Field(
         0.0, ge=-100, le=100, description="further seconds to add for each day after `reference`"
     )
@@ -54,6 +61,9 @@ class Clock(Section):
         if self.drift_s_per_day and self.reference is None:
             raise ValueError("needs `reference`, the instant at which offset_s holds, because drift_s_per_day is not 0")
         return self
+
+
+LAYOUT_CODES = "YymdjbBHIMSfpz"  # of strptime; those that depend on the machine's language or zone are not taken
 
 
 class Time(Section):
@@ -67,6 +77,27 @@ class Time(Section):
         description="iso, epoch_s, or a strptime pattern for the columns joined by one blank, e.g. '%Y %j %H:%M:%S.%f'",
     )
 
+    @model_validator(mode="after")
+    def _layout_names_a_time(self):
+        if self.layout == "iso":
+            return self
+        if self.layout == "epoch_s":
+            if len(self.columns) > 1:
+                raise ValueError("needs one column with `layout: epoch_s`")
+            return self
+        codes = re.findall("%(.?)", self.layout.replace("%%", ""))
+        unknown = [f"%{code}" for code in codes if code not in LAYOUT_CODES or not code]
+        if unknown:
+            known = " ".join(f"%{code}" for code in LAYOUT_CODES)
+            raise ValueError(f"needs a `layout` of {known}, iso or epoch_s; {unknown[0]} is none of them")
+        if len(set(codes)) < len(codes):
+            raise ValueError("needs a `layout` that names each part once")
+        if not {"Y", "y"} & set(codes) or not ("j" in codes or ("d" in codes and {"m", "b", "B"} & set(codes))):
+            raise ValueError("needs a `layout` with year and day (%Y %m %d, or %Y %j), iso, or epoch_s")
+        if "I" in codes and "p" not in codes:
+            raise ValueError("needs %p beside %I in `layout`")
+        return self
+
 
 class Delimited(Section):
     """A delimited text file: one record a row, columns by the names of its heading row."""
@@ -77,12 +108,39 @@ class Delimited(Section):
         ",", min_length=1, max_length=5, description="one character, or tab, or space for any run of blanks"
     )
     skip_rows: int = Field(0, ge=0, le=1000, description="rows before the heading row (or before the data)")
-    names: list[str] | None = Field(None, description="names of the columns, for a file without a heading row")
+    names: list[Cell] | None = Field(None, description="names of the columns, for a file without a heading row")
     comment: str | None = Field("#", max_length=1, description="rows that start with this character are skipped")
     decimal: Literal[".", ","] = Field(".", description="decimal mark")
     encoding: str = Field("utf-8", description="character encoding")
-    missing: list[str] = Field(["", "NaN", "nan", "NA"], description="cells that mean: no value")
+    missing: list[Cell] = Field(
+        ["", "NaN", "nan", "NA"], description="cells that mean: no value; a number means every cell of that value"
+    )
     time: Time
+
+    @model_validator(mode="after")
+    def _text_can_be_split(self):
+        delimiter = {"tab": "\t", "space": " "}.get(self.delimiter, self.delimiter)
+        if len(delimiter) != 1 or not (delimiter.isascii() and (delimiter.isprintable() or delimiter == "\t")):
+            raise ValueError("needs a `delimiter` of one character, or tab, or space")
+        if delimiter.isalnum() or delimiter in '+-."' or delimiter == self.decimal:
+            raise ValueError("needs a `delimiter` that is no letter, digit, sign, quote or decimal mark")
+        if self.comment is not None and not (self.comment.isascii() and self.comment != delimiter):
+            raise ValueError("needs a `comment` that is ASCII and not the delimiter")
+        try:
+            codecs.lookup(self.encoding)
+            "".encode(self.encoding)
+        except (LookupError, UnicodeError, TypeError):
+            raise ValueError("needs an `encoding` that is known, such as utf-8, latin-1 or utf-16") from None
+        if self.names is not None:
+            repeated = sorted({name for name in self.names if self.names.count(name) > 1})
+            if repeated:
+                raise ValueError(f"needs each of `names` once; {repeated[0]} stands twice")
+            columns = getattr(self, "columns", None)
+            wanted = [*self.time.columns, *(columns.model_dump().values() if columns else [])]
+            absent = [name for name in wanted if name is not None and name not in self.names]
+            if absent:
+                raise ValueError(f"needs every column that is used in `names`; {absent[0]} is not")
+        return self
 
 
 class ReadingColumns(Section):
@@ -368,6 +426,9 @@ class Profiles(Section):
     )
     spacing_km: float = Field(0.1, gt=0, le=50, description="spacing of the even samples")
     longest_gap_km: float = Field(0.5, gt=0, description="gaps longer than this stay gaps")
+    gradient_window_m: float = Field(
+        500.0, gt=0, description="length over which the gradient is fitted that turns errors of position into nT"
+    )
 
 
 class Exports(Section):

@@ -11,12 +11,13 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from steps import clock
+
 BLOCK_BYTES = 1 << 21  # of text worked on at a time: what is made of it fits a processor's cache
 NS = 1_000_000_000
 NONE = np.iinfo(np.int64).min  # no time
 KNOT_MPS = 1852.0 / 3600.0
 KMH_MPS = 1000.0 / 3600.0
-YEARS = (1980, 2200)
 
 KINDS = ("GGA", "RMC", "GLL", "VTG", "ZDA", "HDT")  # of the first three the earlier is the better position
 GGA, RMC, GLL, VTG, ZDA, HDT = range(6)
@@ -362,17 +363,9 @@ def _time_of_day(s: _Fields, number) -> np.ndarray:
 
 
 def _midnight(year, month, day) -> np.ndarray:
-    """Return midnights in ns since 1970, NONE where there is no such day."""
-    code = (year * 100 + month) * 100 + day
-    begins = np.concatenate([[0], np.flatnonzero(code[1:] != code[:-1]) + 1]) if len(code) else np.zeros(0, np.int64)
-    y, m, d = year[begins], month[begins], day[begins]  # days change seldom: one look at each run is enough
-    good = (y >= YEARS[0]) & (y < YEARS[1]) & (m >= 1) & (m <= 12) & (d >= 1)
-    months = (np.where(good, y, 1970) - 1970).astype("datetime64[Y]").astype("datetime64[M]")
-    months = months + (np.where(good, m, 1) - 1).astype("timedelta64[M]")
-    days = months.astype("datetime64[D]") + (np.where(good, d, 1) - 1).astype("timedelta64[D]")
-    good &= days.astype("datetime64[M]") == months
-    ns = np.where(good, days.astype("datetime64[ns]").astype(np.int64), NONE)
-    return np.repeat(ns, np.diff(np.append(begins, len(code))))
+    """Return midnights in ns since 1970, NONE where there is no such day, or none since GPS time began."""
+    ns, good = clock.midnights(year, month, day)
+    return np.where(good & (year >= 1980), ns, NONE)
 
 
 def _angle(s: _Fields, number, sides: str) -> np.ndarray:

@@ -12,12 +12,12 @@ from pathlib import Path
 import numpy as np
 import pandas as pd
 
+from steps.clock import YEARS
 from steps.errors import SurveyError, mistake
 from steps.formats.packed import read_bytes
 
 LARGEST_BYTES = 20_000_000
 MOST_MISTAKES = 10
-YEARS = (1900, 2200)  # of any time that is read; datetime64[ns] itself ends in 2262
 _TIME = re.compile(
     r"(\d{4}-\d{2}-\d{2})(?:[T ](\d{2}):(\d{2})(?::(\d{2})(?:[.,](\d{1,9}))?)?)?\s*(Z|UTC|[+-]\d{2}:?\d{2})?",
     re.IGNORECASE | re.ASCII,
