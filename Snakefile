@@ -57,23 +57,6 @@ wildcard_constraints:
     survey="[a-z0-9_-]+",
 
 
-# Every stage's result is asked for by name: a stage that failed is then never forgotten by the next run.
-rule all:
-    input:
-        each("ingest_record.json"),
-        each("lines_record.json"),
-        each("screen_record.json"),
-        each("position_record.json"),
-        each("main_field_record.json"),
-        each("diurnal_record.json"),
-        each("heading_record.json"),
-        "reduced/crossovers_record.json",
-        "reduced/levelling_record.json",
-        each("profiles_record.json"),
-        each("exports_record.json"),
-        "reduced/report_record.json",
-
-
 rule ingest:
     input:
         raw("ingest"),
@@ -361,3 +344,22 @@ rule report:  # all surveys together
         " --line_table {input.line_table} --base {input.base} --crossovers {input.crossovers}"
         " --levels {input.levels} --edits {input.edits:q} --records {input.records}"
         " --write {output} --options {params.options:q} 2> {log}"
+
+
+# Every file of every stage is asked for by name: a stage that failed, or a file that was lost, is then never forgotten
+# by the next run.
+rule all:
+    default_target: True
+    input:
+        expand(rules.ingest.output, survey=SURVEYS),
+        expand(rules.lines.output, survey=SURVEYS),
+        expand(rules.screen.output, survey=SURVEYS),
+        expand(rules.position.output, survey=SURVEYS),
+        expand(rules.main_field.output, survey=SURVEYS),
+        expand(rules.diurnal.output, survey=SURVEYS),
+        expand(rules.heading.output, survey=SURVEYS),
+        rules.crossovers.output,
+        rules.levelling.output,
+        expand(rules.profiles.output, survey=SURVEYS),
+        expand(rules.exports.output, survey=SURVEYS),
+        rules.report.output,

@@ -248,10 +248,10 @@ def settings(survey: Survey, style: Style | None = None, *, sigma_layback_m: flo
         "position": {
             "antenna_to_tow_point": {"forward_m": s.forward_m, "starboard_m": s.starboard_m},
             "layback": {"log": "cable.csv"},
-            "sea_surface_height_m": s.sea_surface_height_m,
             "sigma_navigation_m": round(float(np.hypot(s.fix_noise_m, s.fix_wander_m)), 2),
             "sigma_layback_m": sigma_layback_m,
         },
+        "main_field": {"sea_surface_height_m": s.sea_surface_height_m},
         "diurnal": {
             "base_stations": [
                 {"format": "iaga2002", "files": [f"raw/base_station/{code.lower()}*{ending}"], "name": base["name"]}

@@ -21,7 +21,7 @@ def test_a_stage_has_one_name_everywhere(stage):
     assert (ROOT / "tests" / f"test_{stage}.py").is_file()
     assert stage in settings.SECTIONS
     assert f"python -m steps.{stage} " in SNAKEFILE
-    assert f"{stage}_record.json" in SNAKEFILE.split("rule ingest:")[0], "rule all asks for every stage's record"
+    assert f"rules.{stage}.output" in SNAKEFILE.split("rule all:")[1], "rule all asks for every stage's files"
 
 
 def test_the_rules_are_the_sections_in_order():

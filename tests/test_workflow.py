@@ -1,5 +1,6 @@
 """The workflow on the demo survey: what reruns after which change, and what a failed or broken run leaves."""
 
+import gzip
 import hashlib
 import re
 import shutil
@@ -101,8 +102,7 @@ def test_the_reason_of_a_rerun_is_told(demo):
 
 def test_a_changed_raw_file_reruns_everything_after_its_reader(demo):
     base = sorted((demo / "raw").rglob("*.min*"))[0]
-    base.write_bytes(base.read_bytes() + (b"\n" if base.suffix != ".gz" else b""))
-    base.touch()
+    base.write_bytes(base.read_bytes() + gzip.compress(b""))  # another file with the same records
     assert planned(demo) == FROM_DIURNAL
 
 
