@@ -163,6 +163,7 @@ COLUMNS = {
     "rms_left_out_nt": Column("nT", "float64", "the same with each crossing left out in turn"),
     # profiles
     "distance_km": Column("km", "float64", "geodesic distance along the profile's azimuth from its origin"),
+    "azimuth_deg": Column("degree", "float64", "azimuth of the profile at the sample, in which distance grows"),
     "offset_km": Column("km", "float64", "distance to the right of the profile's straight line"),
     "inclination_deg": Column("degree", "float64", "inclination of the ambient main field, positive downwards"),
     "declination_deg": Column("degree", "float64", "declination of the ambient main field, east positive"),
@@ -242,6 +243,43 @@ TABLES = {
         "status",
     ],
 }
+_TERMS = ["total_field_nt", "main_field_nt", "diurnal_nt", "heading_nt", "level_nt", "anomaly_nt"]
+_SIGMAS = [
+    "sigma_noise_nt",
+    "sigma_position_nt",
+    "sigma_diurnal_nt",
+    "sigma_heading_nt",
+    "sigma_level_nt",
+    "sigma_joint_nt",
+    "sigma_anomaly_nt",
+    "sigma_datum_nt",
+]
+_OWN = [name for stage in ("readings", "lines", "position", "levelling") for name in TABLES[stage]]
+TABLES["corrected"] = [
+    *(name for name in _OWN if name not in (*_TERMS, *_SIGMAS) and not name.endswith("_flags")),
+    "distance_km",
+    "offset_km",
+    *_TERMS,
+    *_SIGMAS,
+    "flags",
+]
+TABLES["profiles"] = [
+    "line",
+    "kind",
+    "distance_km",
+    "offset_km",
+    "azimuth_deg",
+    "time_utc",
+    "sensor_latitude_deg",
+    "sensor_longitude_deg",
+    "sensor_depth_m",
+    "water_depth_m",
+    *_TERMS,
+    *_SIGMAS,
+    "inclination_deg",
+    "declination_deg",
+    "flags",
+]
 TABLES["levelling_crossovers"] = [*TABLES["crossovers"], "residual_nt", "left_out_nt", "weight"]
 
 
