@@ -18,9 +18,10 @@ HUBER, TUKEY = 1.345, 6.0  # robust standard deviations; a clean survey loses ab
 LEAST_SCALE = 0.5  # of the standardised residuals, below which the variances are taken to be too large
 MAD_TO_SIGMA = 1.4826
 INVERTED = 10_000  # unknowns up to which the whole covariance is worked out
-FACTORED = 2500  # unknowns up to which the normal matrix is factored rather than iterated on
+FACTORED = 2500  # unknowns up to which the preconditioner is the factor of the whole normal matrix
 TOLERANCE = 1e-8  # of the conjugate gradients
 DRAWS = 32
+NARROW = 8  # rows of a block up to which A L is formed
 CHUNK = 1 << 18  # crossings handled at once where memory counts
 
 
@@ -34,10 +35,13 @@ class Solution:
         Estimate of x; of unit prior covariance.
     covariance : array, shape (r, r), or None
         Posterior covariance of x; None beyond `INVERTED` unknowns.
+    covariance_z : array, shape (p, p), or None
+        Posterior covariance of z, where blocks are large and it comes for nothing.
     blocks : dict of int to array, or None
-        In its stead, the posterior covariance of each block.
-    draws : array, shape (r, k), or None
-        And draws from the posterior, about the estimate.
+        In its stead, the covariance of each block given all others.
+    draws, means : array, shape (r, k), or None
+        And draws from the posterior about the estimate, and the mean of each block given the others of a draw: the
+        covariance of a block is that given all others plus that of its means.
     residual : array, shape (n,)
         Mismatch minus what the estimate predicts, for every crossing, used or not.
     left_out : array, shape (n,)
@@ -57,8 +61,10 @@ class Solution:
 
     unknowns: np.ndarray
     covariance: np.ndarray | None = field(repr=False)
+    covariance_z: np.ndarray | None = field(repr=False)
     blocks: dict | None = field(repr=False)
     draws: np.ndarray | None = field(repr=False)
+    means: np.ndarray | None = field(repr=False)
     residual: np.ndarray = field(repr=False)
     left_out: np.ndarray = field(repr=False)
     left_out_variance: np.ndarray = field(repr=False)
@@ -159,7 +165,7 @@ def adjust(
     n, r = design.shape[0], root.shape[1]
     sigma = np.sqrt(variance)
     weight = np.ones(n) if weight is None else weight.copy()
-    whole = csr_array(design @ root) if r <= INVERTED or root.nnz <= 4 * r else None  # else A, then L
+    whole = csr_array(design @ root) if root.nnz <= NARROW * r else None  # else A, then L
     system = _System(design, root, whole, block)
     x = system.solve(mismatch, weight / variance, np.zeros(r))
     for k in range(iterations if robust else 0):
@@ -175,14 +181,19 @@ def adjust(
             break
     residual = mismatch - system.forward(x)
     precision = weight / variance
-    whole_covariance = blocks = draws = None
+    whole_covariance = covariance_z = blocks = draws = means = None
     leverage = np.full(n, np.nan)
     if covariance and r <= INVERTED:
         whole_covariance = system.inverse(precision)
-        leverage = np.clip(quadratic(system.whole, whole_covariance) * precision, 0.0, 1.0)
+        if whole is None:
+            covariance_z = sandwich(root, whole_covariance)
+            own = quadratic(design, covariance_z)
+        else:
+            own = quadratic(whole, whole_covariance)
+        leverage = np.clip(own * precision, 0.0, 1.0)
     elif covariance:
-        blocks, draws = system.sample(precision)
-        leverage = np.clip(system.sampled_leverage(blocks, draws) * precision, 0.0, 1.0)
+        blocks, draws, means, own = system.sample(precision)
+        leverage = np.clip(own * precision, 0.0, 0.98)
     free = np.maximum(1 - leverage, 1e-9)
     left_out = np.where(weight > 0, residual / free, residual)
     spread = np.where(weight > 0, variance / np.maximum(weight, 1e-12) / free, np.nan)
@@ -196,8 +207,10 @@ def adjust(
     return Solution(
         x,
         whole_covariance,
+        covariance_z,
         blocks,
         draws,
+        means,
         residual,
         left_out,
         spread,
@@ -246,21 +259,19 @@ class _System:
 
     def solve_normal(self, right, precision, start=None):
         """Solve the normal equations for a right-hand side, shape (r,) or (r, k)."""
-        if self._size <= FACTORED and self.whole is not None:
-            from scipy.linalg import cho_solve
-
-            return cho_solve(self._factor(precision), right, check_finite=False)
         return self._conjugate_gradients(right, precision, np.zeros_like(right) if start is None else start)
 
     def _dense(self, precision):
-        weighted = self.whole.multiply(np.sqrt(precision)[:, None]).tocsr()
-        if self.whole.nnz > 0.05 * self.whole.shape[0] * self._size:
-            full = np.zeros((self._size, self._size), order="F")
-            for first in range(0, weighted.shape[0], CHUNK // 64):
-                rows = weighted[first : first + CHUNK // 64].toarray()
-                full += rows.T @ rows
+        from scipy.sparse import csr_array
+
+        matrix = self._design if self.whole is None else self.whole
+        weighted = matrix.multiply(np.sqrt(precision)[:, None]).tocsr()
+        full = csr_array(weighted.T @ weighted)
+        if self.whole is None:
+            root = self._root.toarray()
+            full = root.T @ (full @ root)
         else:
-            full = (weighted.T @ weighted).toarray(order="F")
+            full = full.toarray(order="F")
         full[np.diag_indices_from(full)] += 1.0
         return full
 
@@ -301,9 +312,7 @@ class _System:
         else:  # within a block L, A'WA within its rows
             own = self._design.multiply(np.sqrt(precision)[:, None]).tocsr()
             nodes = csr_array(own.T @ own)
-            block_of_row = np.zeros(self._root.shape[0], int) - 1
-            filled = np.diff(self._root.indptr) > 0
-            block_of_row[filled] = of_column[self._root.indices[self._root.indptr[:-1][filled]]]
+            block_of_row = self._block_of_row()
             inner = nodes.tocoo()
             same = block_of_row[inner.row] == block_of_row[inner.col]
             inner = csr_array((inner.data[same], (inner.row[same], inner.col[same])), shape=nodes.shape)
@@ -322,8 +331,11 @@ class _System:
     def _conjugate_gradients(self, right, precision, x):
         """Solve by preconditioned conjugate gradients, several right-hand sides side by side."""
         if self._preconditioner is None:  # weights change little from iteration to iteration: made once
-            blocks = self._block_matrices(precision)
-            self._preconditioner = {s: (members, np.linalg.inv(stack)) for s, (members, stack) in blocks.items()}
+            if self._size <= FACTORED:
+                self._preconditioner = self._factor(precision)
+            else:
+                blocks = self._block_matrices(precision)
+                self._preconditioner = {s: (members, np.linalg.inv(stack)) for s, (members, stack) in blocks.items()}
         residual = right - self.normal(x, precision)
         limit = TOLERANCE * np.sqrt(np.sum(right * self._precondition(right), axis=0))
         z = self._precondition(residual)
@@ -342,6 +354,10 @@ class _System:
         return x
 
     def _precondition(self, v):
+        if isinstance(self._preconditioner, tuple):
+            from scipy.linalg import cho_solve
+
+            return cho_solve(self._preconditioner, v, check_finite=False)
         return self._by_block(v, self._preconditioner)
 
     def _by_block(self, v, stacks):
@@ -354,28 +370,66 @@ class _System:
         return found
 
     def sample(self, precision):
-        """Draw from the posterior, and work out the covariance of each block with it."""
+        """Draw from the posterior; return blocks, draws and means as `Solution` has them, and ``a L C L'a'``."""
         rng = np.random.default_rng(20)
         noise = rng.standard_normal((len(precision), DRAWS)) * np.sqrt(precision)[:, None]
         right = self.back(noise) + rng.standard_normal((self._size, DRAWS))
         del noise
-        self._preconditioner = None
+        stacks = self._block_matrices(precision)
+        exact = {s: (members, np.linalg.inv(stack)) for s, (members, stack) in stacks.items()}
+        self._preconditioner = exact
         draws = self._conjugate_gradients(right, precision, np.zeros_like(right))
-        exact = self._preconditioner  # inverses of the blocks under the final weights
-        conditional = draws - self._by_block(self.normal(draws, precision), exact)
+        change = -self._by_block(self.normal(draws, precision), exact)  # from a draw to the mean given all other blocks
         blocks = {}
-        for s, (members, matrices) in exact.items():
-            part = conditional[self._starts[members][:, None] + np.arange(s)]
-            stack = matrices + np.matmul(part, part.transpose(0, 2, 1)) / DRAWS
-            blocks |= dict(zip(members.tolist(), stack, strict=True))
-        return blocks, draws
+        for members, matrices in exact.values():
+            blocks |= dict(zip(members.tolist(), matrices, strict=True))
+        return blocks, draws, draws + change, self._sampled_leverage(blocks, draws, change)
 
-    def sampled_leverage(self, blocks, draws):
-        """Return ``a L C L'a'`` of each crossing from draws."""
-        total = np.zeros(self._design.shape[0])
-        for k in range(draws.shape[1]):
-            total += self.forward(draws[:, k]) ** 2
-        return total / draws.shape[1]
+    def _sampled_leverage(self, inverse, draws, change):
+        """Return ``a L C L'a'`` of each crossing: exact given the other blocks, and the draws of those.
+
+        A crossing of two blocks has two such estimates, which are averaged.
+        """
+        from scipy.sparse import csr_array
+
+        n = self._design.shape[0]
+        moved = self.forward(draws)
+        total, count = np.zeros(n), np.zeros(n)
+        of_row = self._block_of_row()
+        entries = self._design.tocoo()
+        block = of_row[entries.col]
+        order = np.argsort(block, kind="stable")
+        edges = np.searchsorted(block[order], np.arange(len(self._sizes) + 1))
+        for b in range(len(self._sizes)):
+            mine = order[edges[b] : edges[b + 1]]
+            if not len(mine):
+                continue
+            rows, row = np.unique(entries.row[mine], return_inverse=True)
+            nodes, node = np.unique(entries.col[mine], return_inverse=True)
+            own = slice(self._starts[b], self._starts[b] + self._sizes[b])
+            part = csr_array((entries.data[mine], (row, node)), shape=(len(rows), len(nodes)))
+            d = part @ self._root[nodes][:, own].toarray()
+            for first in range(0, len(rows), CHUNK // 8):
+                some = slice(first, first + CHUNK // 8)
+                mean = moved[rows[some]] + d[some] @ change[own]
+                total[rows[some]] += np.einsum("ij,ij->i", d[some] @ inverse[b], d[some]) + np.mean(mean**2, axis=1)
+                count[rows[some]] += 1
+        return total / np.maximum(count, 1)
+
+    def _block_of_row(self):
+        """Return the block of x that each z depends on; -1 for none."""
+        of_column = np.repeat(np.arange(len(self._sizes)), self._sizes)
+        found = np.full(self._root.shape[0], -1)
+        filled = np.diff(self._root.indptr) > 0
+        found[filled] = of_column[self._root.indices[self._root.indptr[:-1][filled]]]
+        return found
+
+
+def sandwich(rows, covariance: np.ndarray) -> np.ndarray:
+    """Return ``F C F'`` for a sparse or half-filled matrix F of shape (n, r)."""
+    dense = rows.toarray() if rows.nnz > 0.02 * rows.shape[0] * rows.shape[1] else rows
+    half = dense @ covariance
+    return (dense @ half.T).T if dense is rows else half @ dense.T
 
 
 def quadratic(rows, covariance: np.ndarray, others=None) -> np.ndarray:

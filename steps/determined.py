@@ -488,7 +488,7 @@ def sum_up(levels, statistics, settings) -> tuple[dict, list[str], str]:
     p = levels.posterior
     record["scale"] = _number(p.scale)
     record["degrees_of_freedom"] = _number(used.sum() - np.nansum(p.leverage[p.weight > 0]))
-    record["sigma_datum_nt"] = [_number(np.sqrt(max(v, 0.0))) for v in p.datum_variance[:100]]
+    record["sigma_datum_nt"] = [_number(v) for v in p.datum_sigma[:100]]
     record["terms"], record["processes"] = _about_terms(levels)
     kept = joint.kept_terms(levels.fit.model)
     if "line_drift" in kept:

@@ -26,6 +26,8 @@ from steps.posterior import solve
 from steps.screen import rejected
 from steps.settings import Levelling
 
+MANY = 1000  # nodes
+
 
 def in_order(lines: pd.DataFrame) -> pd.DataFrame:
     """Put lines in canonical order (survey, start, name), on which no result may depend otherwise.
@@ -220,10 +222,16 @@ def level(
 
 
 def nodes_of(lines: pd.DataFrame, settings: Levelling) -> Nodes:
-    """Place the nodes of the lines: closely where corrections may drift, else one a line."""
-    constant = settings.line_drift == settings.time_drift == "off"
-    spacing = None if constant else settings.knots_h
-    return joint.place_nodes(lines["start_utc"].to_numpy(), lines["end_utc"].to_numpy(), spacing)
+    """Place the nodes of the lines: closely where corrections may drift, else one a line.
+
+    Where that would be more than `MANY` nodes they are a third of the shortest correlation time apart, if that is more.
+    """
+    span = lines["start_utc"].to_numpy(), lines["end_utc"].to_numpy()
+    if settings.line_drift == settings.time_drift == "off":
+        return joint.place_nodes(*span, None)
+    close = joint.place_nodes(*span, settings.knots_h)
+    wide = min(settings.drift_scales_h) / 3
+    return close if len(close) <= MANY or wide <= settings.knots_h else joint.place_nodes(*span, wide)
 
 
 def _with_results(crossings, rows, sign, posterior, first, second, m) -> pd.DataFrame:

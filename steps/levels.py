@@ -173,7 +173,7 @@ def at_readings(
         shift = np.nan_to_num(change[:, 5:]).sum(axis=1)
         found["position_change_nt"][on] = np.where(levels.applied[5:].any(), shift, np.nan)
         found["level_nt"][on] = value + shift
-        found["sigma_datum_nt"][on] = np.where(network >= 0, np.sqrt(p.datum_variance[np.maximum(network, 0)]), np.nan)
+        found["sigma_datum_nt"][on] = np.where(network >= 0, p.datum_sigma[np.maximum(network, 0)], np.nan)
         there = np.nan_to_num(given[on]) * levels.applied
         variance = _joint_variance(levels, survey, where, time_utc[on], there, loose)
         for term, sigma in (("time_drift", sigma_diurnal_nt), ("heading", sigma_heading_nt)):
@@ -277,10 +277,7 @@ def write_covariance(path, levels: Levels) -> None:
             c = c - (with_datum[:, None] + with_datum[None, :] - p.datum_level_variance[network][:, None]) * same
             content["covariance_nt2"] = c * loose[:, None] * loose[None, :]
         elif p.factor is not None:
-            factor = p.factor[rows]
-            weight = levels.lines["readings"].to_numpy(float)[nodes.line[rows]]
-            mean = np.stack([np.bincount(network, weight * part) for part in factor.T], axis=1)
-            content["factor_nt"] = factor - (mean / np.bincount(network, weight)[:, None])[network]
+            content["factor_nt"] = p.factor[rows]
     content |= {
         "survey": lines["survey"].to_numpy(str)[nodes.line[rows]],
         "line": lines["line"].to_numpy(str)[nodes.line[rows]],

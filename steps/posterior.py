@@ -14,6 +14,7 @@ from steps.joint import Nodes, deviation
 
 COLLOCATED = 600  # crossings up to which V is inverted
 TOGETHER = 1500  # nodes whose prior covariance is one block; beyond it, drift in time is cut between stretches
+NEGLIGIBLE = 1e-6  # of the largest eigenvalue of a block's prior covariance: below it an axis is dropped
 KEPT_WHOLE = 3000  # unknowns up to which the covariance of all nodes is held at once
 
 
@@ -36,8 +37,10 @@ class Posterior:
     effects_covariance : array, shape (surveys, 7, 7)
     mixed : array, shape (M, 7)
         Covariance of z with the coefficients of its own survey.
-    datum, datum_variance : array, shape (networks,)
-        d and its variance.
+    datum, datum_sigma : array, shape (networks,)
+        d, and one sigma of it, if line errors are as likely to be positive as negative.
+    datum_variance : array, shape (networks,)
+        Its variance, zero where all variances and covariances below are those of z - d already.
     datum_nodes, datum_level_nodes : array, shape (M,)
         Covariance of z with d and with d_z of its network.
     datum_level_variance : array, shape (networks,)
@@ -47,7 +50,7 @@ class Posterior:
     covariance : array, shape (M, M), or None
         Covariance of z at all nodes, where it is small enough to be held.
     factor : array, shape (M, k), or None
-        In its stead, draws of z about its estimate.
+        In its stead, draws of z - d about its estimate.
     residual, left_out, left_out_variance, weight, leverage : array, shape (n,)
         Of the crossings; see `adjustment.Solution`.
     scale : float
@@ -62,6 +65,7 @@ class Posterior:
     effects_covariance: np.ndarray
     mixed: np.ndarray
     datum: np.ndarray
+    datum_sigma: np.ndarray
     datum_variance: np.ndarray
     datum_nodes: np.ndarray
     datum_level_nodes: np.ndarray
@@ -225,6 +229,7 @@ def _from_covariance(mean, covariance, nodes, points, datum, surveys, **of_cross
     of_z, of_b = datum.of_nodes, datum.of_effects
     with_level = (of_z @ covariance[:m]).T  # (unknowns, networks)
     with_datum = with_level + (of_b @ covariance[m:]).T
+    datum_variance = np.asarray((of_z @ with_datum[:m]).diagonal() + (of_b @ with_datum[m:]).diagonal())
     network = datum.network[nodes.line]
     rows = np.arange(m)
     inside = network >= 0
@@ -250,7 +255,8 @@ def _from_covariance(mean, covariance, nodes, points, datum, surveys, **of_cross
         ),
         mixed=covariance[rows[:, None], m + points.survey[:, None] * k + np.arange(k)],
         datum=of_z @ mean[:m] + of_b @ mean[m:],
-        datum_variance=np.asarray((of_z @ with_datum[:m]).diagonal() + (of_b @ with_datum[m:]).diagonal()),
+        datum_sigma=np.sqrt(np.maximum(datum_variance, 0.0)),
+        datum_variance=datum_variance,
         datum_nodes=own(with_datum[:m]),
         datum_level_nodes=own(with_level[:m]),
         datum_level_variance=np.asarray((of_z @ with_level[:m]).diagonal()),
@@ -263,7 +269,7 @@ def _from_covariance(mean, covariance, nodes, points, datum, surveys, **of_cross
 
 def _adjust(crossings, model, nodes, points, datum, robust, kept, first_utc, second_utc) -> Posterior:
     """Solve in the space of the nodes."""
-    from scipy.sparse import block_array, csr_array
+    from scipy.sparse import block_array, csr_array, identity
 
     surveys, k = model.prior.shape[:2]
     m, n = len(nodes), len(crossings)
@@ -323,107 +329,117 @@ def _adjust(crossings, model, nodes, points, datum, robust, kept, first_utc, sec
     }
     both = csr_array(block_array([[of_level], [of_effects]]))
     if found.covariance is not None and both.shape[0] <= 2 * KEPT_WHOLE:
-        half = both @ found.covariance
-        covariance = (both @ half.T).T
+        if found.covariance_z is None:
+            covariance = adjustment.sandwich(both, found.covariance)
+        elif not offset:
+            covariance = found.covariance_z
+        else:  # the level at a node is that of the line and that of its survey
+            shifted = csr_array((points.loose, (np.arange(m), points.survey)), shape=(m, surveys))
+            whole = identity(m + surveys * k, format="csr")
+            tail = csr_array(block_array([[shifted], [csr_array((surveys * k, surveys))]]))
+            covariance = adjustment.sandwich(csr_array(block_array([[whole, tail]])), found.covariance_z)
         return _from_covariance(both @ found.unknowns, covariance, nodes, points, datum, surveys, **of_crossings)
     return _from_solution(found, of_level, of_effects, nodes, points, datum, surveys, label[order], of_crossings)
 
 
 def _from_solution(found, of_level, of_effects, nodes, points, datum, surveys, label, of_crossings) -> Posterior:
     """Pick what readings need from a large solution, without the covariance of everything with everything."""
+    k = len(EFFECTS)
+    value, effects = of_level @ found.unknowns, of_effects @ found.unknowns
+    common = {
+        "value": value,
+        "effects": effects.reshape(surveys, k),
+        "datum": datum.of_nodes @ value + datum.of_effects @ effects,
+        "covariance": None,
+        **of_crossings,
+    }
+    if found.covariance is None:
+        return Posterior(**common, **_sampled(found, of_level, of_effects, nodes, points, datum, surveys, label))
+    return Posterior(**common, factor=None, **_gathered(found.covariance, of_level, of_effects, nodes, points, datum))
+
+
+def _gathered(c, of_level, of_effects, nodes, points, datum) -> dict:
+    """Gather variances and covariances from the covariance of all unknowns."""
     from scipy.sparse import csr_array
 
     m, k = len(nodes), len(EFFECTS)
     network = datum.network[nodes.line]
-    inside = network >= 0
+    lines = np.flatnonzero(datum.network >= 0)
     level = csr_array(datum.of_nodes @ of_level)
     whole = csr_array(level + datum.of_effects @ of_effects)
-    lines = np.flatnonzero(datum.network >= 0)
+    with_level, with_datum = (c @ functional.T.toarray() for functional in (level, whole))
+    own = np.arange(m), np.maximum(network, 0)
     own_effects = of_effects[(datum.survey[lines][:, None] * k + np.arange(k)).ravel()]
+    at = np.repeat(datum.network[lines], k)
     datum_effects = np.zeros((len(datum.network), k))
-    spread = {}
-    for name, functional in (("level", level), ("whole", whole)):
-        if found.covariance is not None:
-            moved = found.covariance @ functional.T.toarray()
-            spread[name] = (of_level @ moved)[np.arange(m), np.maximum(network, 0)]
-            spread[f"{name}_variance"] = np.asarray((functional @ moved).diagonal())
-            if name == "whole":
-                at = np.repeat(datum.network[lines], k)
-                datum_effects[lines] = (own_effects @ moved)[np.arange(len(at)), at].reshape(-1, k)
-        else:  # networks do not touch, so one solution serves all of them
-            moved = found.solve(np.asarray(functional.sum(axis=0)).ravel())
-            spread[name] = of_level @ moved
-            spread[f"{name}_variance"] = functional @ moved
-            if name == "whole":
-                datum_effects[lines] = (own_effects @ moved).reshape(-1, k)
-    if found.covariance is not None:
-        c = found.covariance
-        variance = adjustment.quadratic(of_level, c)
-        following = np.append(adjustment.quadratic(csr_array(of_level[:-1]), c, csr_array(of_level[1:])), 0.0)
-        mixed = np.zeros((m, k))
-        for j in np.flatnonzero(np.diff(of_effects.indptr).reshape(-1, k).any(axis=0)):
-            mixed[:, j] = adjustment.quadratic(of_level, c, csr_array(of_effects[points.survey * k + j]))
-        effects_covariance = np.zeros((surveys, k, k))
-        for s in range(surveys):
-            own = of_effects[s * k : (s + 1) * k]
-            effects_covariance[s] = (own @ (own @ c).T).T
-        factor = None
-    else:
-        variance, following, mixed, effects_covariance = _by_blocks(found, of_level, of_effects, points, surveys, label)
-        factor = of_level @ found.draws
-    value, effects = of_level @ found.unknowns, of_effects @ found.unknowns
-    return Posterior(
-        value=value,
-        variance=variance,
-        following=following,
-        effects=effects.reshape(surveys, k),
-        effects_covariance=effects_covariance,
-        mixed=mixed,
-        datum=datum.of_nodes @ value + datum.of_effects @ effects,
-        datum_variance=spread["whole_variance"],
-        datum_nodes=np.where(inside, spread["whole"], 0.0),
-        datum_level_nodes=np.where(inside, spread["level"], 0.0),
-        datum_level_variance=spread["level_variance"],
-        datum_effects=datum_effects,
-        covariance=None,
-        factor=factor,
-        **of_crossings,
-    )
+    datum_effects[lines] = (own_effects @ with_datum)[np.arange(len(at)), at].reshape(-1, k)
+    mixed = np.zeros((m, k))
+    for j in np.flatnonzero(np.diff(of_effects.indptr).reshape(-1, k).any(axis=0)):
+        mixed[:, j] = adjustment.quadratic(of_level, c, csr_array(of_effects[points.survey * k + j]))
+    surveys = of_effects.shape[0] // k
+    parts = [of_effects[s * k : (s + 1) * k] for s in range(surveys)]
+    datum_variance = np.asarray((whole @ with_datum).diagonal())
+    return {
+        "variance": adjustment.quadratic(of_level, c),
+        "following": np.append(adjustment.quadratic(csr_array(of_level[:-1]), c, csr_array(of_level[1:])), 0.0),
+        "mixed": mixed,
+        "effects_covariance": np.array([adjustment.sandwich(part, c) for part in parts]),
+        "datum_sigma": np.sqrt(np.maximum(datum_variance, 0.0)),
+        "datum_variance": datum_variance,
+        "datum_nodes": np.where(network >= 0, (of_level @ with_datum)[own], 0.0),
+        "datum_level_nodes": np.where(network >= 0, (of_level @ with_level)[own], 0.0),
+        "datum_level_variance": np.asarray((level @ with_level).diagonal()),
+        "datum_effects": datum_effects,
+    }
 
 
-def _by_blocks(found, of_level, of_effects, points, surveys, label):
-    """Work out variances survey by survey from the blocks' covariances, from draws where a survey has several."""
-    k = len(EFFECTS)
+def _sampled(found, of_level, of_effects, nodes, points, datum, surveys, label) -> dict:
+    """Work out variances, the datum left out, survey by survey: given all others exactly, and by draws of those."""
+    m, k, count = len(nodes), len(EFFECTS), found.draws.shape[1]
+    network = datum.network[nodes.line]
     level_draws, effect_draws = of_level @ found.draws, of_effects @ found.draws
-    count = found.draws.shape[1]
-    variance = np.mean(level_draws**2, axis=1)
-    following = np.append(np.mean(level_draws[:-1] * level_draws[1:], axis=1), 0.0)
+    datum_draws = datum.of_nodes @ level_draws + datum.of_effects @ effect_draws
+    factor = level_draws - np.where(network[:, None] >= 0, datum_draws[np.maximum(network, 0)], 0.0)
+    # by draws alone, for what lies in several blocks
+    variance = np.mean(factor**2, axis=1)
+    following = np.append(np.mean(factor[:-1] * factor[1:], axis=1), 0.0)
     grouped = effect_draws.reshape(surveys, k, count)
-    mixed = np.einsum("md,mkd->mk", level_draws, grouped[points.survey]) / count
+    mixed = np.einsum("md,mkd->mk", factor, grouped[points.survey]) / count
     effects_covariance = np.einsum("skd,sld->skl", grouped, grouped) / count
     number = np.searchsorted(np.unique(label), label)
     starts = np.flatnonzero(np.diff(number, prepend=-1))
     stops = np.append(starts[1:], len(number))
     first, last = (np.searchsorted(points.survey, np.arange(surveys), side=side) for side in ("left", "right"))
     for s in range(surveys):
-        nodes = np.arange(first[s], last[s])
-        if not len(nodes):
-            continue
-        rows = of_level[nodes[0] : nodes[-1] + 1]
-        own = of_effects[s * k : (s + 1) * k]
+        q = last[s] - first[s]
+        rows, own = of_level[first[s] : last[s]], of_effects[s * k : (s + 1) * k]
         touched = np.unique(number[np.concatenate([rows.indices, own.indices])])
-        if len(touched) != 1:
+        if q == 0 or len(touched) != 1:
             continue
         b = int(touched[0])
         part = slice(starts[b], stops[b])
         both = np.concatenate([rows[:, part].toarray(), own[:, part].toarray()])
-        covariance = both @ found.blocks[b] @ both.T
-        q = len(nodes)
-        variance[nodes] = np.diag(covariance)[:q]
-        following[nodes[:-1]] = np.diag(covariance, 1)[: q - 1]
-        mixed[nodes] = covariance[:q, q:]
+        draws = both @ found.means[part]
+        draws[:q] += factor[first[s] : last[s]] - level_draws[first[s] : last[s]]
+        covariance = both @ found.blocks[b] @ both.T + draws @ draws.T / count
+        nodes_here = slice(first[s], last[s])
+        variance[nodes_here] = np.diag(covariance)[:q]
+        following[first[s] : last[s] - 1] = np.diag(covariance, 1)[: q - 1]
+        mixed[nodes_here] = covariance[:q, q:]
         effects_covariance[s] = covariance[q:, q:]
-    return variance, following, mixed, effects_covariance
+    return {
+        "variance": variance,
+        "following": following,
+        "mixed": mixed,
+        "effects_covariance": effects_covariance,
+        "datum_sigma": np.sqrt(np.mean(datum_draws**2, axis=1)),
+        "datum_variance": np.zeros(len(datum_draws)),
+        "datum_nodes": np.zeros(m),
+        "datum_level_nodes": np.zeros(m),
+        "datum_level_variance": np.zeros(len(datum_draws)),
+        "datum_effects": np.zeros((len(datum.network), k)),
+        "factor": factor,
+    }
 
 
 def _stretches(survey: np.ndarray) -> np.ndarray:
@@ -465,7 +481,7 @@ def _roots(model: Model, points: Points, block: np.ndarray):
             spread, axes = np.linalg.eigh(signal(model, own, own, effects=False))
             root = axes * np.sqrt(np.maximum(spread, 0.0))[:, None, :]
             for number, matrix, values in zip(some, root, spread, strict=True):
-                parts[number] = matrix[:, values > 1e-9 * max(values[-1], 1e-300)]
+                parts[number] = matrix[:, values > NEGLIGIBLE * max(values[-1], 1e-300)]
     ranks = np.array([part.shape[1] for part in parts])
     first = np.concatenate([[0], np.cumsum(ranks)])
     indptr = np.concatenate([[0], np.cumsum(np.repeat(ranks, sizes))])
