@@ -1,69 +1,48 @@
 """Take the variation of the external field from base stations to the ship.
 
-At a station the variation is ``F(t) - main field(t) - datum``. Taking the main field off keeps secular variation from
-becoming a trend. The regular daily variation follows local solar time, storms and bays follow universal time: so the
-slow part of a station's variation is shifted by the difference of longitude (15 degrees an hour) and the fast part is
-not (Riddihough 1971, Geophysical Prospecting 19). Several stations are combined anew for every instant from those that
-have data then; a station fades in and out over half an hour at the ends of its record, so that no step enters the
-survey.
+The regular daily variation follows local solar time, storms and bays follow universal time: so the slow part of a
+station's variation is shifted by the difference of longitude (15 degrees an hour) and the fast part is not (Riddihough
+1971, Geophysical Prospecting 19; `steps.base_station` makes the parts). Where the shift asks for a time that the record
+does not hold, the slow part is taken to stay as it was at the record's edge, and sigma grows by how much it changes in
+such a time elsewhere in the record.
 
-Uncertainty grows with distance; where there are two stations or more, it is calibrated by predicting each from the
-others. Three-hour ranges are those of Bartels, Heck & Johnston (1939), Terrestrial Magnetism 44, of the total field.
+Several stations are combined anew for every instant from those that have data then. A station's weight fades out over
+the last hour before its record ends, or pauses for longer than a gap that is bridged, and fades in likewise: no step
+enters the survey. Their datums are made to agree over common time beforehand, so that what does enter is a difference
+that the stations have.
+
+Sigma is ``near^2 + (growth x distance)^2``, with the distance to the nearest station that has data. Where there are two
+stations or more, the growth is found by predicting each from the others, for quiet and for disturbed time.
 """
 
-from dataclasses import dataclass
+from dataclasses import dataclass, fields
 
 import numpy as np
 import pandas as pd
 
-from steps import main_field, stage
+from steps import stage
+from steps.base_records import read_records
+from steps.base_station import (
+    LAGS_S,
+    NS_PER_S,
+    SLOW_LAGS_S,
+    Station,
+    agree_on_datum,
+    station_variation,
+    three_hour_ranges,
+)
 from steps.columns import Flag
-from steps.errors import SurveyError
 from steps.settings import Diurnal
 
 EARTH_RADIUS_KM = 6371.0
-NIGHT_H = (22.0, 4.0)  # local solar time in which the daily variation is small (common practice)
-HALF_AMPLITUDE = np.sqrt(2 * np.log(2)) / (2 * np.pi)  # sigma of a Gaussian over the period that it halves
-FADE_S = 1800.0
+FADE_S = 3600.0
 NEAREST_KM = 10.0  # nearer than this, distance no longer tells stations apart
-SLOW_CLOCK_S = 60.0
-NS_PER_S = 1_000_000_000
-
-
-@dataclass
-class Station:
-    """A base station's variation on an even clock.
-
-    Attributes
-    ----------
-    name : str
-    latitude_deg, longitude_deg : float
-    time_s : array of float, shape (n,)
-        Seconds since 1970, even.
-    variation_nt : array of float, shape (n,)
-        F - main field - datum, gaps of stated length bridged, low-passed; NaN in longer gaps.
-    slow_nt : array of float, shape (n,)
-        Its slow part, defined in gaps too.
-    disturbed : array of bool, shape (n,)
-    margin_s : array of float, shape (n,)
-        Time to the nearest end of the record or long gap; 0 inside one.
-    datum_nt : float
-        What was subtracted beside the main field.
-    datum_from : str
-        How the datum was found.
-
-    """
-
-    name: str
-    latitude_deg: float
-    longitude_deg: float
-    time_s: np.ndarray
-    variation_nt: np.ndarray
-    slow_nt: np.ndarray
-    disturbed: np.ndarray
-    margin_s: np.ndarray
-    datum_nt: float
-    datum_from: str
+PIECE = 1 << 14  # readings worked on together: what fits the cache
+SAMPLES = 4000  # of a station, to calibrate with
+FEWEST = 60  # samples that a calibration may rest on
+FURTHER = 2.0  # how many times the distance between the stations their calibration is good for
+UPSET_SHARE = 0.05  # of a line's readings in disturbed time, from which on it is named
+MOST_NAMED = 4
 
 
 def distance_km(lat_1, lon_1, lat_2, lon_2) -> np.ndarray:
@@ -74,213 +53,38 @@ def distance_km(lat_1, lon_1, lat_2, lon_2) -> np.ndarray:
     return 2 * EARTH_RADIUS_KM * np.arcsin(np.sqrt(np.clip(a, 0, 1)))
 
 
-def local_linear(values: np.ndarray, sigma: float) -> np.ndarray:
-    """Smooth even samples by straight lines fitted with Gaussian weights; gaps and ends are allowed for.
+# -- prediction ------------------------------------------------------------------------------------------------------
 
-    Parameters
+
+@dataclass(frozen=True)
+class Prediction:
+    """Variation at places and times.
+
+    Attributes
     ----------
-    values : array of float, shape (n,)
-        NaN where missing.
-    sigma : float
-        Of the weights, in samples.
-
-    Returns
-    -------
-    array of float, shape (n,)
-        NaN only where no sample is within four sigma.
+    variation_nt : array of float, shape (n,)
+        NaN where no station has data, or the place is not known.
+    distance_km : array of float, shape (n,)
+        To the nearest station that has data.
+    unsure_nt : array of float, shape (n,)
+        One sigma of what bridged gaps, and the edges of records, leave open.
+    disturbed : array of bool, shape (n,)
+        The nearest station that has data is disturbed.
+    nearest : array of int, shape (n,)
+        That station; -1 where there is none.
 
     """
-    from scipy.signal import oaconvolve
 
-    half = max(1, int(np.ceil(4 * sigma)))
-    t = np.arange(-half, half + 1)
-    kernel = np.exp(-((t / sigma) ** 2) / 2)
-    good = np.isfinite(values)
-    level = np.median(values[good]) if good.any() else 0.0
-    y = np.where(good, values - level, 0.0)
-    w = good.astype(float)
-
-    def moment(series, power):
-        # sum over k of kernel(k - i) (k - i)^power series(k): a correlation, hence the flipped kernel
-        return oaconvolve(series, (kernel * t**power)[::-1], mode="full")[half : half + len(series)]
-
-    s0, s1, s2, b0, b1 = moment(w, 0), moment(w, 1), moment(w, 2), moment(y, 0), moment(y, 1)
-    det = s0 * s2 - s1 * s1
-    enough = s0 > 1e-3
-    straight = enough & (det > 1e-6 * s0 * s0 * sigma**2)
-    with np.errstate(divide="ignore", invalid="ignore"):
-        line = (s2 * b0 - s1 * b1) / det
-        mean = b0 / s0
-    return np.where(enough, np.where(straight, line, mean) + level, np.nan)
-
-
-def bridge(values: np.ndarray, longest: int) -> np.ndarray:
-    """Interpolate gaps of up to `longest` samples; longer ones, and the ends, stay missing.
-
-    Parameters
-    ----------
-    values : array of float, shape (n,)
-    longest : int
-
-    Returns
-    -------
-    array of float, shape (n,)
-
-    """
-    good = np.isfinite(values)
-    if good.all() or not good.any():
-        return values
-    index = np.arange(len(values))
-    filled = np.interp(index, index[good], values[good])
-    known = index[good]
-    after = np.searchsorted(known, index)
-    before = np.clip(after - 1, 0, len(known) - 1)
-    gap = known[np.minimum(after, len(known) - 1)] - known[before] - 1
-    inside = (after > 0) & (after < len(known)) & (gap <= longest)
-    return np.where(good, values, np.where(inside, filled, np.nan))
-
-
-def find_disturbed(values: np.ndarray, chord: int, limit_nt: float) -> np.ndarray:
-    """Find samples that depart from the chord between the samples half a chord before and after.
-
-    Parameters
-    ----------
-    values : array of float, shape (n,)
-        Variation, nT.
-    chord : int
-        Length of the chord in samples.
-    limit_nt : float
-        Departure beyond which the whole chord counts as disturbed (common practice: a few nT over 5 to 10 minutes).
-
-    Returns
-    -------
-    array of bool, shape (n,)
-
-    """
-    half = max(1, chord // 2)
-    disturbed = np.zeros(len(values), bool)
-    if len(values) <= 2 * half:
-        return disturbed
-    departure = np.abs(values[half:-half] - (values[2 * half :] + values[: -2 * half]) / 2)
-    beyond = np.concatenate([np.zeros(half, int), (departure > limit_nt).astype(int), np.zeros(half, int)])
-    count = np.concatenate([[0], np.cumsum(beyond)])
-    index = np.arange(len(values))
-    return count[np.minimum(index + half + 1, len(values))] > count[np.maximum(index - half, 0)]
-
-
-def make_station(
-    name: str,
-    time_utc: np.ndarray,
-    total_field_nt: np.ndarray,
-    lat: float,
-    lon: float,
-    height_m: float,
-    *,
-    settings: Diurnal,
-) -> Station:
-    """Turn a station's record into its variation.
-
-    Parameters
-    ----------
-    name : str
-    time_utc : array of datetime64[ns], shape (n,)
-        Increasing, each instant once.
-    total_field_nt : array of float, shape (n,)
-        NaN where missing.
-    lat, lon, height_m : float
-        Geodetic position; height above the ellipsoid.
-    settings : Diurnal
-
-    Returns
-    -------
-    Station
-
-    Raises
-    ------
-    SurveyError
-        If the record holds no value.
-
-    """
-    known = np.isfinite(total_field_nt)
-    if known.sum() < 2:
-        raise SurveyError(
-            f"base station {name}: must hold at least two values of the total field. Got {int(known.sum())}."
-        )
-    seconds = time_utc.astype(np.int64) / NS_PER_S
-    step = float(np.median(np.diff(seconds)))
-    tick = np.rint((seconds - seconds[0]) / step).astype(np.int64)
-    n = int(tick[-1]) + 1
-    time_s = seconds[0] + step * np.arange(n)
-    count = np.bincount(tick[known], minlength=n)
-    # a value between two ticks belongs to its own instant: put it on the clock by the record's slope
-    on_clock = np.interp(time_s, seconds[known], total_field_nt[known])
-    raw = np.where(count > 0, on_clock, np.nan)
-    nodes = np.linspace(time_s[0], time_s[-1], max(2, int((time_s[-1] - time_s[0]) / 86400) + 2))
-    year = main_field.decimal_year((nodes * NS_PER_S).astype(np.int64).astype("datetime64[ns]"))
-    main = main_field.total_field(np.full(len(nodes), lat), lon, height_m, year)
-    departure = raw - np.interp(time_s, nodes, main)
-    departure = bridge(departure, int(settings.longest_gap_s / step))
-    disturbed = find_disturbed(departure, round(settings.chord_min * 60 / step), settings.disturbed_nt)
-    sigma = HALF_AMPLITUDE * settings.low_pass_s / step
-    if sigma > 0.5:
-        departure = np.where(np.isfinite(departure), local_linear(departure, sigma), np.nan)
-    datum, found = _datum(departure, disturbed, time_s, lon, settings)
-    variation = departure - datum
-    good = np.isfinite(variation)
-    return Station(
-        name,
-        lat,
-        lon,
-        time_s,
-        variation,
-        _slow(variation, step, settings),
-        disturbed,
-        _margin(good, step),
-        datum,
-        found,
-    )
-
-
-def _datum(departure, disturbed, time_s, lon, settings) -> tuple[float, str]:
-    """Return the level of a station that counts as no variation, and how it was found."""
-    if not isinstance(settings.datum, str):
-        return float(settings.datum), "stated"
-    good = np.isfinite(departure)
-    if settings.datum == "quiet_night":
-        hour = (time_s / 3600 + lon / 15) % 24
-        night = good & ~disturbed & ((hour >= NIGHT_H[0]) | (hour < NIGHT_H[1]))
-        if np.count_nonzero(night) * (time_s[1] - time_s[0]) >= 3600:
-            return float(np.median(departure[night])), "median of quiet local night"
-    return float(np.mean(departure[good])), "mean of the record"
-
-
-def _slow(variation, step, settings) -> np.ndarray:
-    """Return the slow part, worked out on a clock of a minute or more."""
-    many = max(1, round(SLOW_CLOCK_S / step))
-    n = len(variation)
-    padded = np.full(-(-n // many) * many, np.nan)
-    padded[:n] = variation
-    blocks = padded.reshape(-1, many)
-    good = np.isfinite(blocks)
-    with np.errstate(invalid="ignore"):
-        coarse = np.where(good.any(axis=1), np.where(good, blocks, 0).sum(axis=1) / good.sum(axis=1), np.nan)
-    slow = local_linear(coarse, HALF_AMPLITUDE * settings.slow_period_h * 3600 / (step * many))
-    known = np.isfinite(slow)
-    centre = (np.arange(len(coarse)) + 0.5) * many - 0.5
-    return np.interp(np.arange(n), centre[known], slow[known])
-
-
-def _margin(good, step) -> np.ndarray:
-    """Return the time from every sample to the nearest missing one or end."""
-    index = np.arange(len(good))
-    last = np.maximum.accumulate(np.where(good, -1, index))
-    following = np.minimum.accumulate(np.where(good, len(good), index)[::-1])[::-1]
-    return np.minimum(index - last, following - index) * step * good
+    variation_nt: np.ndarray
+    distance_km: np.ndarray
+    unsure_nt: np.ndarray
+    disturbed: np.ndarray
+    nearest: np.ndarray
 
 
 def predict(
     stations: list[Station], time_s: np.ndarray, lat: np.ndarray, lon: np.ndarray, *, settings: Diurnal
-) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+) -> Prediction:
     """Predict the variation at places and times from stations.
 
     Parameters
@@ -294,265 +98,402 @@ def predict(
 
     Returns
     -------
-    variation : array of float, shape (n,)
-        nT, NaN where no station has data.
-    distance : array of float, shape (n,)
-        To the nearest station with data, km.
-    disturbed : array of bool, shape (n,)
-        That station is disturbed.
+    Prediction
 
     """
-    n = len(time_s)
-    total, weight = np.zeros(n), np.zeros(n)
-    nearest, disturbed = np.full(n, np.inf), np.zeros(n, bool)
-    kept = []
-    for station in stations:
-        value, margin, bad = _at(station, time_s, lon, settings)
-        away = distance_km(lat, lon, station.latitude_deg, station.longitude_deg)
-        known = np.isfinite(value) & np.isfinite(away)
-        nearer = known & (away < nearest)
-        nearest[nearer], disturbed[nearer] = away[nearer], bad[nearer]
-        if settings.combine == "nearest":
-            total[nearer], weight[nearer] = value[nearer], 1.0
+    pieces = [
+        _predict_piece(stations, time_s[k : k + PIECE], lat[k : k + PIECE], lon[k : k + PIECE], settings)
+        for k in range(0, max(1, len(time_s)), PIECE)
+    ]
+    return Prediction(*(np.concatenate([getattr(p, part.name) for p in pieces]) for part in fields(Prediction)))
+
+
+def _predict_piece(stations, time_s, lat, lon, settings) -> Prediction:
+    """Predict for one piece of readings; rows of the matrices are stations."""
+    shape = (len(stations), len(time_s))
+    value, unsure, away, fade = np.zeros(shape), np.zeros(shape), np.full(shape, np.inf), np.zeros(shape)
+    for k, station in enumerate(stations):
+        late_s = _shift_s(station, lon) if settings.local_time_shift else None
+        own, margin = _variation_at(station, time_s, late_s)
+        known = np.isfinite(own) & np.isfinite(lat)
+        if not known.any():
             continue
-        w = np.clip((margin + 1.0) / FADE_S, 0, 1) / (away**2 + NEAREST_KM**2)
-        total += np.where(known, w * value, 0.0)
-        weight += np.where(known, w, 0.0)
-        if settings.combine == "plane":
-            kept.append((station, np.where(known, w, 0.0), np.where(known, value, 0.0)))
+        value[k] = np.where(known, own, 0.0)
+        away[k, known] = distance_km(lat[known], lon[known], station.latitude_deg, station.longitude_deg)
+        # smooth at both ends; at the very edge a trace is left, so that a station alone stays in charge
+        share = np.clip(margin / FADE_S, 1e-4, 1.0)
+        fade[k] = np.where(known, share * share * (3 - 2 * share), 0.0)
+        unsure[k] = np.where(known, _unsure(station, time_s, late_s), 0.0)
+    nearest = np.argmin(away, axis=0)
+    column = np.arange(len(time_s))
+    some = np.isfinite(away[nearest, column])
+    weight = _weights(away, fade, lat, lon, stations, settings)
+    total = weight.sum(axis=0)
     with np.errstate(invalid="ignore", divide="ignore"):
-        variation = np.where(weight > 0, total / weight, np.nan)
-    if settings.combine == "plane" and len(kept) >= 3:
-        variation = _plane(kept, lat, lon, variation)
-    return variation, np.where(np.isfinite(nearest), nearest, np.nan), disturbed
+        variation = np.where(some, (weight * value).sum(axis=0) / total, np.nan)
+        unsure = np.where(some, (np.abs(weight) * unsure).sum(axis=0) / np.abs(weight).sum(axis=0), np.nan)
+    disturbed = np.zeros(len(time_s), bool)
+    for k, station in enumerate(stations):
+        mine = some & (nearest == k)
+        place = np.rint((time_s[mine] - station.coarse.start_s) / station.coarse.step_s).astype(np.int64)
+        disturbed[mine] = station.disturbed[np.clip(place, 0, len(station.disturbed) - 1)]
+    return Prediction(
+        variation, np.where(some, away[nearest, column], np.nan), unsure, disturbed, np.where(some, nearest, -1)
+    )
 
 
-def _at(station: Station, time_s, lon, settings):
-    """Return a station's variation at the ship's local time, the margin to a gap, and whether it is disturbed."""
-    step = station.time_s[1] - station.time_s[0]
-    place = (time_s - station.time_s[0]) / step
-    tick = np.clip(place.astype(np.int64), 0, len(station.time_s) - 2)
-    inside = (place >= 0) & (place <= len(station.time_s) - 1)
-    share = np.clip(place - tick, 0, 1)
-    v = station.variation_nt
-    value = np.where(share == 0, v[tick], v[tick] + share * (v[tick + 1] - v[tick]))
-    if settings.local_time_shift:
-        hours = ((lon - station.longitude_deg + 180.0) % 360.0 - 180.0) / 15.0
-        # beyond the ends of the record the last slow value stands
-        then = np.interp(time_s + 3600.0 * hours, station.time_s, station.slow_nt)
-        now = np.interp(time_s, station.time_s, station.slow_nt)
-        value = value + (then - now)
-    margin = np.minimum(station.margin_s[tick], station.margin_s[tick + 1])
-    return np.where(inside, value, np.nan), margin, station.disturbed[tick]
+def _shift_s(station, lon) -> np.ndarray:
+    """Return how much later, in universal time, the station has the local time of a longitude, s."""
+    east = lon - station.longitude_deg
+    return 240.0 * (east - 360.0 * np.rint(east / 360.0))
 
 
-def _plane(kept, lat, lon, otherwise):
-    """Fit a plane in position to the stations at every instant; `otherwise` where that cannot be done."""
-    s = np.zeros((3, 3, len(lat)))
-    b = np.zeros((3, len(lat)))
-    for station, w, value in kept:
-        x = ((station.longitude_deg - lon + 180.0) % 360.0 - 180.0) * np.cos(np.radians(lat)) * 111.2
-        y = (station.latitude_deg - lat) * 111.2
-        terms = (np.ones_like(x), x / 100.0, y / 100.0)
-        flat = np.where(w > 0, 1.0, 0.0) * np.minimum(1.0, w / np.maximum(w, 1e-300))
-        for i in range(3):
-            b[i] += flat * terms[i] * value
-            for j in range(3):
-                s[i, j] += flat * terms[i] * terms[j]
-    matrices = s.transpose(2, 0, 1)
-    determined = np.isfinite(matrices).all(axis=(1, 2)) & np.isfinite(otherwise)
-    condition = np.full(len(lat), np.inf)
-    condition[determined] = np.linalg.cond(matrices[determined])
-    determined &= condition < 1e4
-    result = otherwise.copy()
-    solved = np.linalg.solve(matrices[determined], b.T[determined][..., None])
-    result[determined] = solved[:, 0, 0]
-    return result
+def _variation_at(station: Station, time_s, late_s) -> tuple[np.ndarray, np.ndarray]:
+    """Return a station's variation with its slow part at the ship's local time, and the time to the record's edge."""
+    margin = -_outside(station.known_s, time_s)
+    value = np.where(margin >= 0, station.variation.at(time_s), np.nan)
+    if late_s is not None:
+        value = value + station.slow.at(time_s + late_s) - station.slow.at(time_s)
+    return value, margin
 
 
-def growth_with_distance(stations: list[Station], *, settings: Diurnal) -> tuple[float, list[dict]]:
-    """Calibrate how the error grows with distance, by predicting each station from the others.
+def _outside(stretches_s: np.ndarray, time_s: np.ndarray) -> np.ndarray:
+    """Return the time to the nearest stretch, or to the stretch's edge as a negative number inside one."""
+    starts, ends = stretches_s.T
+    before = np.searchsorted(starts, time_s, side="right") - 1
+    since = np.where(before >= 0, time_s - ends[np.maximum(before, 0)], np.inf)
+    until = np.where(before + 1 < len(starts), starts[np.minimum(before + 1, len(starts) - 1)] - time_s, np.inf)
+    inside = since <= 0
+    into = time_s - starts[np.maximum(before, 0)]
+    return np.where(inside, -np.minimum(into, -since), np.minimum(since, until))
+
+
+def _unsure(station: Station, time_s, late_s) -> np.ndarray:
+    """Return one sigma of what bridged gaps and the record's edges leave open, nT."""
+    squares = np.zeros(len(time_s))
+    if len(station.bridged_s):
+        starts, ends = station.bridged_s.T
+        gap = np.clip(np.searchsorted(starts, time_s, side="right") - 1, 0, len(starts) - 1)
+        before, after = time_s - starts[gap], ends[gap] - time_s
+        inside = (before > 0) & (after > 0)
+        # a walk that is known at both ends has the variance of one known at one end after before * after / length
+        lag = np.where(inside, before * after / (ends[gap] - starts[gap]), 0.0)
+        squares += np.interp(lag, (0.0, *LAGS_S), (0.0, *station.change_nt)) ** 2
+    if late_s is not None:
+        beyond = np.maximum(_outside(station.known_s, time_s + late_s), 0.0)
+        squares += np.interp(np.nan_to_num(beyond), (0.0, *SLOW_LAGS_S), (0.0, *station.slow_change_nt)) ** 2
+    return np.sqrt(squares)
+
+
+def _weights(away, fade, lat, lon, stations, settings) -> np.ndarray:
+    """Return the weight of every station at every reading, not normalised; 0 where it has no data."""
+    if settings.combine == "nearest":
+        # the nearest takes what its fade allows, the next of the rest, and so on
+        order = np.argsort(away, axis=0, kind="stable")
+        sorted_fade = np.take_along_axis(fade, order, axis=0)
+        left = np.cumprod(np.concatenate([np.ones((1, fade.shape[1])), 1 - sorted_fade[:-1]]), axis=0)
+        weight = np.empty_like(fade)
+        np.put_along_axis(weight, order, sorted_fade * left, axis=0)
+        return weight
+    if settings.combine == "distance" or len(stations) < 3:
+        return fade / (away**2 + NEAREST_KM**2)
+    # A plane through the stations, in tangent coordinates at the ship: its value at the ship is a weighted sum of
+    # theirs. A gradient of the size that the law of error expects is the prior, so that two stations, or three in a
+    # row, or one that fades out, are no special cases.
+    x = ((np.array([s.longitude_deg for s in stations])[:, None] - lon + 180.0) % 360.0 - 180.0) * np.cos(
+        np.radians(lat)
+    )
+    y = np.array([s.latitude_deg for s in stations])[:, None] - lat
+    x, y = (np.where(fade > 0, 1.112 * part, 0.0) for part in (x, y))  # hundreds of km
+    prior = max(settings.sigma_at_base_nt, 0.05) ** 2 / max(settings.sigma_nt_per_100km, 0.05) ** 2
+    n, sx, sy = fade.sum(axis=0), (fade * x).sum(axis=0), (fade * y).sum(axis=0)
+    sxx, syy = (fade * x * x).sum(axis=0) + prior, (fade * y * y).sum(axis=0) + prior
+    sxy = (fade * x * y).sum(axis=0)
+    # first row of the inverse of the normal matrix, times its determinant
+    a, b, c = sxx * syy - sxy**2, sxy * sy - sx * syy, sx * sxy - sxx * sy
+    determinant = n * a + sx * b + sy * c
+    return fade * (a + b * x + c * y) / np.where(determinant > 0, determinant, 1.0)
+
+
+# -- sigma -----------------------------------------------------------------------------------------------------------
+
+
+@dataclass(frozen=True)
+class ErrorLaw:
+    """How the error of the term grows with distance from the nearest station that has data.
+
+    Attributes
+    ----------
+    near_nt : float
+        One sigma beside a station.
+    quiet_nt_per_100km, disturbed_nt_per_100km : float
+        Growth in quiet and in disturbed time.
+    stated_nt_per_100km : float
+        Growth that the settings state; the least that is believed beyond `reach_km`.
+    reach_km : float
+        How far the growth was tried out between the stations; 0 where it is as stated.
+
+    """
+
+    near_nt: float
+    quiet_nt_per_100km: float
+    disturbed_nt_per_100km: float
+    stated_nt_per_100km: float
+    reach_km: float = 0.0
+
+
+def sigma(prediction: Prediction, law: ErrorLaw) -> np.ndarray:
+    """Return one sigma of predicted variations, nT; NaN where nothing is predicted."""
+    growth = np.where(prediction.disturbed, law.disturbed_nt_per_100km, law.quiet_nt_per_100km)
+    near = np.minimum(prediction.distance_km, law.reach_km)
+    squares = law.near_nt**2 + (growth * near / 100) ** 2 + prediction.unsure_nt**2
+    squares += np.maximum(growth, law.stated_nt_per_100km) ** 2 * (prediction.distance_km**2 - near**2) / 1e4
+    return np.sqrt(squares)
+
+
+def calibrate(stations: list[Station], *, settings: Diurnal) -> tuple[ErrorLaw, list[dict]]:
+    """Find how the error grows with distance by predicting each station from the others.
 
     Parameters
     ----------
     stations : list of Station
-        Two or more.
+        With one alone, the law is as stated.
     settings : Diurnal
 
     Returns
     -------
-    float
-        nT per 100 km.
-    list of dict
-        ``station``, ``distance_km`` to the nearest other, ``rms_nt`` of the prediction's error, its mean removed.
+    law : ErrorLaw
+    rows : list of dict
+        ``station``, ``distance_km`` to the nearest other, ``rms_nt`` of the error of the prediction, its mean removed,
+        ``samples``.
 
     """
-    rows, squares = [], []
-    for k, station in enumerate(stations):
-        others = stations[:k] + stations[k + 1 :]
-        n = len(station.time_s)
-        place = (np.full(n, part) for part in (station.latitude_deg, station.longitude_deg))
-        predicted, away, _ = predict(others, station.time_s, *place, settings=settings)
-        error = station.variation_nt - predicted
-        error = error[np.isfinite(error)]
-        if len(error) < 60:
+    stated = settings.sigma_nt_per_100km
+    law = ErrorLaw(settings.sigma_at_base_nt, stated, stated, stated)
+    rows, errors, distances, upset = [], [], [], []
+    for k, station in enumerate(stations if len(stations) > 1 else []):
+        time_s = station.coarse.times()[np.isfinite(station.coarse.value)]
+        time_s = time_s[:: max(1, len(time_s) // SAMPLES)]
+        place = np.full(len(time_s), station.latitude_deg), np.full(len(time_s), station.longitude_deg)
+        found = predict(stations[:k] + stations[k + 1 :], time_s, *place, settings=settings)
+        known = np.isfinite(found.variation_nt)
+        if known.sum() < FEWEST:
             continue
-        rms, distance = float(np.std(error)), float(np.nanmedian(away))
-        rows.append({"station": station.name, "distance_km": distance, "rms_nt": rms})
-        # the station's own local error is in it as well as that of the others
-        squares.append(max(0.0, rms**2 - 2 * settings.sigma_at_base_nt**2) / (max(distance, NEAREST_KM) / 100.0) ** 2)
-    return (float(np.sqrt(np.mean(squares))) if squares else settings.sigma_nt_per_100km), rows
+        error = (station.coarse.at(time_s) - found.variation_nt)[known]
+        error -= error.mean()
+        distance = np.maximum(found.distance_km[known], 1e-3)
+        rows.append(
+            {
+                "station": station.name,
+                "distance_km": float(np.median(distance)),
+                "rms_nt": float(np.sqrt(np.mean(error**2))),
+                "samples": int(known.sum()),
+            }
+        )
+        errors.append(error)
+        distances.append(distance)
+        upset.append(found.disturbed[known])
+    if not rows:
+        return law, rows
+    error, distance, disturbed = (np.concatenate(part) for part in (errors, distances, upset))
+    quiet = _growth(error, distance, ~disturbed, law.near_nt)
+    storm = _growth(error, distance, disturbed, law.near_nt)
+    quiet = quiet if quiet is not None else _growth(error, distance, np.ones(len(error), bool), law.near_nt)
+    storm = quiet if storm is None else max(quiet, storm)
+    return ErrorLaw(law.near_nt, quiet, storm, stated, FURTHER * float(distance.max())), rows
 
 
-def three_hour_ranges(station: Station, start_s: float, end_s: float) -> float | None:
-    """Return the largest three-hour range of the variation during a span, nT; None where there are no data."""
-    chosen = (station.time_s >= start_s - 10800) & (station.time_s <= end_s + 10800) & np.isfinite(station.variation_nt)
-    window = (station.time_s[chosen] // 10800).astype(np.int64)
-    own = (window >= start_s // 10800) & (window <= end_s // 10800)
-    if not own.any():
+def _growth(error, distance, chosen, near_nt) -> float | None:
+    """Return the growth that explains errors, nT per 100 km; None where there are too few."""
+    if chosen.sum() < FEWEST:
         return None
-    grouped = pd.Series(station.variation_nt[chosen][own]).groupby(window[own])
-    return float((grouped.max() - grouped.min()).max())
+    # the predicted station's own error is in it as well as that of the others
+    excess = np.mean(error[chosen] ** 2) - 2 * near_nt**2
+    return float(np.sqrt(max(excess, 0.0) / np.mean((distance[chosen] / 100) ** 2)))
 
 
 # -- stage -----------------------------------------------------------------------------------------------------------
 
 
-def read_station(source, paths) -> tuple[pd.DataFrame, tuple, list[dict]]:
-    """Read one station's files: its record, its position, and what each file held."""
-    from steps import clock
-    from steps.provenance import checksum
+def _text(instant_s: float) -> str:
+    return str(np.datetime64(int(instant_s), "s"))
 
-    parts, files, place = [], [], None
-    for path in paths:
-        if source.format == "iaga2002":
-            from steps.formats.iaga2002 import read_iaga2002
 
-            header, table = read_iaga2002(path)
-            counts = header.counts
-            place = place or (header.latitude_deg, header.longitude_deg, header.elevation_m)
-        else:
-            from steps.formats.delimited import read_delimited
+def _span(time_utc: np.ndarray) -> tuple[float, float]:
+    """Return first and last instant, seconds since 1970."""
+    return tuple(float(instant.astype(np.int64)) / NS_PER_S for instant in (time_utc.min(), time_utc.max()))
 
-            table, counts = read_delimited(path, source, {"total_field_nt": source.columns.total_field_nt})
-            table = table.rename(columns={"time": "time_utc"})
-        parts.append(table[["time_utc", "total_field_nt"]])
-        files.append({"file": str(path), "sha256": checksum(path), "counts": counts})
-    table = pd.concat(parts, ignore_index=True)
-    table["time_utc"] = clock.correct(table["time_utc"].to_numpy(), source.clock)
-    table = table.sort_values("time_utc", kind="stable").drop_duplicates("time_utc").reset_index(drop=True)
-    own = (source.latitude_deg, source.longitude_deg, source.height_m)
-    place = tuple(a if a is not None else b for a, b in zip(own, place or own, strict=True))
-    if place[0] is None or place[1] is None:
-        raise SurveyError(
-            f"{paths[0]}: must state the station's position. Give latitude_deg and longitude_deg in survey.yaml."
+
+def make_stations(records: list, span_s: tuple[float, float], *, settings: Diurnal) -> tuple[list[Station], list[dict]]:
+    """Make the variation of all stations that have a record about the time of the survey, their datums in agreement.
+
+    Parameters
+    ----------
+    records : list of Record
+        See `steps.base_records`.
+    span_s : tuple of float
+        First and last reading, seconds since 1970.
+    settings : Diurnal
+
+    Returns
+    -------
+    stations : list of Station
+    about : list of dict
+        For each: what `diurnal_record.json` says of it.
+
+    """
+    used = [record for record in records if len(record.time_utc) > 1]
+    stations = [
+        station_variation(
+            record.time_utc,
+            record.total_field_nt,
+            record.latitude_deg,
+            record.longitude_deg,
+            record.height_m,
+            settings=settings,
+            name=record.name,
+            span_s=span_s,
         )
-    return table, (place[0], place[1], place[2] or 0.0), files
+        for record in used
+    ]
+    own = [station.datum_nt for station in stations]
+    stations, groups = agree_on_datum(stations, settings=settings)
+    about = [
+        {
+            "station": station.name,
+            "latitude_deg": station.latitude_deg,
+            "longitude_deg": station.longitude_deg,
+            "height_m": record.height_m,
+            "datum_nt": station.datum_nt,
+            "datum_from": station.datum_from,
+            "datum_change_nt": station.datum_nt - datum,
+            "group": group,
+            "start_utc": _text(station.known_s[0, 0]),
+            "end_utc": _text(station.known_s[-1, 1]),
+            "step_s": station.variation.step_s,
+            "bridged_gaps": len(station.bridged_s),
+            "long_gaps": len(station.known_s) - 1,
+        }
+        for station, record, datum, group in zip(stations, used, own, groups, strict=True)
+    ]
+    return stations, about
 
 
 def main(job: stage.Job) -> None:
     """Read the base stations and predict the variation at every reading."""
     time = job.table("readings", ["time_utc"])["time_utc"].to_numpy()
-    position = job.table("position", ["sensor_latitude_deg", "sensor_longitude_deg"]).to_numpy()
-    table, own = job.table("line_table"), job.settings
-    n = len(time)
-    stations, files = [], []
-    for number, source in enumerate(own.base_stations):
-        record, place, read = read_station(source, job.inputs[f"base_{number}"])
-        files += read
-        field = record["total_field_nt"].to_numpy()
-        odd = (field < 10_000) | (field > 100_000)
-        if odd.any():
-            raise SurveyError(
-                f"base station {source.name}: total field must be between 10000 and 100000 nT. Got {field[odd][0]:g} "
-                f"at {str(record['time_utc'][np.flatnonzero(odd)[0]])[:19]}. Check unit, column and missing codes."
-            )
-        stations.append(make_station(source.name, record["time_utc"].to_numpy(), field, *place, settings=own))
-    seconds = time.astype(np.int64) / NS_PER_S
-    if not stations:
-        variation, sigma = np.full(n, np.nan), np.full(n, np.nan)
-        flags = np.full(n, int(Flag.NO_DIURNAL), np.uint32)
+    lat, lon = job.table("position", ["sensor_latitude_deg", "sensor_longitude_deg"]).to_numpy().T
+    if not job.settings.base_stations:
+        missing = np.full(len(time), np.nan)
+        flags = np.full(len(time), int(Flag.NO_DIURNAL), np.uint32)
+        job.record |= {"reason": "no base station", "stations": [], "files": []}
         job.note("there is no base station: the diurnal term is missing, and levelling has to carry it.")
         job.done("no base station: term missing")
-    else:
-        growth, calibration = own.sigma_nt_per_100km, []
-        if len(stations) > 1:
-            growth, calibration = growth_with_distance(stations, settings=own)
-        variation, away, disturbed = predict(stations, seconds, *position.T, settings=own)
-        missing = ~np.isfinite(variation)
-        sigma = np.where(missing, np.nan, np.hypot(own.sigma_at_base_nt, growth * away / 100.0))
-        flags = np.where(missing, np.uint32(Flag.NO_DIURNAL), np.uint32(0))
-        flags |= np.where(disturbed & ~missing, np.uint32(Flag.DISTURBED), np.uint32(0))
-        job.record |= {"growth_nt_per_100km": growth, "calibration": calibration}
-        _tell(job, stations, table, missing, disturbed, position)
-        job.done(
-            f"{len(stations)} base station{'s' * (len(stations) > 1)}; {int((~missing).sum())} readings with a value, "
-            f"{int(missing.sum())} without, {int((disturbed & ~missing).sum())} disturbed; "
-            f"{np.nanmin(variation) if (~missing).any() else np.nan:.1f} to "
-            f"{np.nanmax(variation) if (~missing).any() else np.nan:.1f} nT"
-        )
-    job.record["files"] = files
-    job.write("diurnal", pd.DataFrame({"diurnal_nt": variation, "sigma_diurnal_nt": sigma, "diurnal_flags": flags}))
-    job.write("diurnal_base", _shown(stations))
+        _write(job, missing, missing, flags, [])
+        return
+    span_s = _span(time)
+    records = read_records(job.settings.base_stations, job.inputs, span_s)
+    for record in records:
+        for sentence in record.notes:
+            job.note(sentence)
+    stations, about = make_stations(records, span_s, settings=job.settings)
+    law, calibration = calibrate(stations, settings=job.settings)
+    found = predict(stations, time.astype(np.int64) / NS_PER_S, lat, lon, settings=job.settings)
+    value = found.variation_nt
+    missing = np.isnan(value)
+    flags = np.where(missing, np.uint32(Flag.NO_DIURNAL), np.uint32(0))
+    flags |= np.where(found.disturbed & ~missing, np.uint32(Flag.DISTURBED), np.uint32(0))
+    lines, line_index = job.table("line_table"), job.table("lines")["line_index"].to_numpy()
+    job.record |= {
+        "files": [file for record in records for file in record.files],
+        "ledgers": [{"station": record.name, **record.ledger} for record in records],
+        "stations": about,
+        "calibration": calibration,
+        "law": {part.name: float(getattr(law, part.name)) for part in fields(ErrorLaw)},
+        "missing": int(missing.sum()),
+        "disturbed": int((found.disturbed & ~missing).sum()),
+        "three_hour_ranges": _ranges(stations, found.nearest, lines, line_index),
+    }
+    _say(job, stations, about, span_s, missing & np.isfinite(lat))
+    _say_of_lines(job, found, missing & np.isfinite(lat), lines, line_index)
+    job.done(
+        f"{len(stations)} base station{'s' * (len(stations) != 1)}; {int((~missing).sum())} readings with a value, "
+        f"{int(missing.sum())} without, {job.record['disturbed']} disturbed"
+        + (f"; {np.nanmin(value):.1f} to {np.nanmax(value):.1f} nT" if not missing.all() else "")
+    )
+    _write(job, value, sigma(found, law), flags, stations)
 
 
-def _tell(job, stations, table, missing, disturbed, position) -> None:
-    """Put stations and lines into the record; note what deserves a look."""
-    job.record["stations"] = [
-        {
-            "station": station.name,
-            "latitude_deg": station.latitude_deg,
-            "longitude_deg": station.longitude_deg,
-            "datum_nt": station.datum_nt,
-            "datum_from": station.datum_from,
-        }
-        for station in stations
-    ]
+def _write(job, value, one_sigma, flags, stations) -> None:
+    """Write the term, and the stations' variation for figures, at most one value a minute."""
+    job.write("diurnal", pd.DataFrame({"diurnal_nt": value, "sigma_diurnal_nt": one_sigma, "diurnal_flags": flags}))
+    parts = [pd.DataFrame({"station": [], "time_utc": [], "variation_nt": [], "disturbed": []})]
+    for station in stations:
+        every = max(1, int(60.0 / station.coarse.step_s))
+        clock = np.rint(station.coarse.times()[::every] * 1e6).astype(np.int64).astype("datetime64[us]")
+        shown = {"station": station.name, "time_utc": clock, "variation_nt": station.coarse.value[::every]}
+        parts.append(pd.DataFrame({**shown, "disturbed": station.disturbed[::every]}))
+    job.write("diurnal_base", pd.concat(parts[1:] or parts, ignore_index=True))
+
+
+def _ranges(stations, nearest, lines, line_index) -> list[dict]:
+    """Return the three-hour ranges of every line, at the station that is nearest for most of it."""
     start, end = (
-        table[name].to_numpy().astype("datetime64[ns]").astype(np.int64) / NS_PER_S for name in ("start_utc", "end_utc")
+        lines[name].to_numpy().astype("datetime64[ns]").astype(np.int64) / NS_PER_S for name in ("start_utc", "end_utc")
     )
-    ranges = [three_hour_ranges(stations[0], a, b) for a, b in zip(start, end, strict=True)]
-    job.record["three_hour_ranges"] = [
-        {"line": line, "range_nt": value} for line, value in zip(table["line"], ranges, strict=True)
-    ]
-    line_index = job.table("lines")["line_index"].to_numpy()
-    on_line = line_index >= 0
-    placed = np.isfinite(position[:, 0])
-    lost = np.bincount(line_index[on_line & missing & placed], minlength=len(table))
-    for line, count in zip(table["line"], lost, strict=True):
-        if count:
-            job.note(f"line {line}: {count} readings have no diurnal value, for want of a base station's record.")
-    upset = np.bincount(line_index[on_line & disturbed], minlength=len(table)) / np.maximum(
-        table["readings"].to_numpy(), 1
-    )
-    for line, share in zip(table["line"], upset, strict=True):
-        if share > 0.05:
-            job.note(f"line {line}: {100 * share:.0f} % of the readings fall in magnetically disturbed time.")
-    for station in stations:
-        if job.settings.datum == "quiet_night" and station.datum_from != "median of quiet local night":
-            job.note(
-                f"base station {station.name}: no hour of quiet night in its record; its mean is the datum instead."
-            )
+    used = (line_index >= 0) & (nearest >= 0)
+    votes = np.zeros((len(lines), len(stations)), np.int64)
+    np.add.at(votes, (line_index[used], nearest[used]), 1)
+    rows = []
+    for k, line in enumerate(lines["line"]):
+        station = stations[int(votes[k].argmax())]
+        found = three_hour_ranges(station, start[k], end[k]) if votes[k].any() else None
+        whole, quick = found or (None, None)
+        rows.append({"line": line, "station": station.name, "range_nt": whole, "range_less_slow_nt": quick})
+    return rows
 
 
-def _shown(stations: list[Station]) -> pd.DataFrame:
-    """Return the stations' variation for figures, at most one value a minute."""
-    parts = []
-    for station in stations:
-        every = max(1, round(60.0 / (station.time_s[1] - station.time_s[0])))
-        parts.append(
-            pd.DataFrame(
-                {
-                    "station": station.name,
-                    "time_utc": np.rint(station.time_s[::every] * 1e6).astype(np.int64).astype("datetime64[us]"),
-                    "variation_nt": station.variation_nt[::every],
-                    "disturbed": station.disturbed[::every],
-                }
-            )
-        )
-    if not parts:
-        parts = [pd.DataFrame({"station": [], "time_utc": [], "variation_nt": [], "disturbed": []})]
-    return pd.concat(parts, ignore_index=True)
+def _named(names: list[str]) -> str:
+    """Name a few lines."""
+    more = f" and {len(names) - MOST_NAMED} more" if len(names) > MOST_NAMED else ""
+    return ", ".join(names[:MOST_NAMED]) + more
+
+
+def _say(job, stations, about, span_s, missing) -> None:
+    """Note what deserves a look in the stations."""
+    for station, told in zip(stations, about, strict=True):
+        if "for want of" in told["datum_from"] or "nothing during" in told["datum_from"]:
+            job.note(f"base station {station.name}: its datum is the {told['datum_from']}.")
+        first, last = station.known_s[0, 0], station.known_s[-1, 1]
+        for late, edge, words in (
+            (first > span_s[0] + 60, first, "begins {} and the survey before that"),
+            (last < span_s[1] - 60, last, "ends {} and the survey after that"),
+        ):
+            if late:
+                rest = "others stand in." if len(stations) > 1 else "readings there have no diurnal value."
+                job.note(f"base station {station.name}: its record {words.format(_text(edge))}: {rest}")
+    alone = [told["station"] for told in about if [t["group"] for t in about].count(told["group"]) == 1]
+    if len(stations) > 1 and alone:
+        job.note(f"no time in common with other base stations, so that datums may differ: {_named(alone)}.")
+
+
+def _say_of_lines(job, found, missing, lines, line_index) -> None:
+    """Note the lines that have no diurnal value in places, or lie in disturbed time."""
+    count = np.maximum(np.bincount(line_index[line_index >= 0], minlength=len(lines)), 1)
+    lost = np.bincount(line_index[(line_index >= 0) & missing], minlength=len(lines))
+    upset = np.bincount(line_index[(line_index >= 0) & found.disturbed], minlength=len(lines)) / count
+    names = lines["line"].tolist()
+    if lost.any():
+        which = [names[k] for k in np.flatnonzero(lost)]
+        job.note(f"{lost.sum()} readings have no diurnal value, for want of a base station's record: {_named(which)}.")
+    worst = [k for k in np.argsort(-upset, kind="stable") if upset[k] > UPSET_SHARE]
+    if worst:
+        shares = [f"{names[k]} ({100 * upset[k]:.0f} % of its readings)" for k in worst]
+        job.note(f"lines in magnetically disturbed time: {_named(shares)}.")
+    if job.settings.combine == "nearest":
+        turns = int(np.count_nonzero(np.diff(found.nearest[found.nearest >= 0])))
+        if turns:
+            job.note(f"another base station becomes the nearest {turns} times: the diurnal term steps there.")
 
 
 if __name__ == "__main__":
