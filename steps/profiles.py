@@ -5,8 +5,8 @@
 in every reading and in every sample: all terms pass the same filter over the same readings (`steps.resampling`). What
 the joint adjustment changed in the heading and diurnal terms is added to them first. A term that the whole survey lacks
 is not subtracted, and record and files say why; where a term is missing that other readings of the survey have, the
-anomaly is missing too, with a flag for the reason. So a line without a usable crossing has all its other terms, but no
-anomaly, in a survey that is levelled, unless the user holds its level at zero.
+anomaly is missing too, with a flag for the reason. Level is a term of whole lines: a line without a usable crossing has
+none, and keeps its anomaly, not levelled, flagged as such.
 
 A line is projected on the geodesic that fits it best, its distance counted from its own end, or on one of stated
 azimuth through the middle of the survey, the origin of all its lines, except lines that run more than 45 degrees off
@@ -91,7 +91,7 @@ def combine(parts: dict[str, pd.DataFrame]) -> tuple[pd.DataFrame, list[str]]:
         if np.isnan(value).all():
             absent.append(term)
         else:
-            anomaly = anomaly - value
+            anomaly = anomaly - (np.nan_to_num(value) if term == "level_nt" else value)
     return table.assign(flags=flags, anomaly_nt=np.where(rejected(flags), np.nan, anomaly)), absent
 
 
@@ -282,7 +282,7 @@ def make_profile(line: pd.DataFrame, frame: dict, settings: Profiles, absent: li
     }
     anomaly = columns["total_field_nt"]
     for term in TERMS:
-        if term not in absent:
+        if term not in absent and not (term == "level_nt" and line[term].isna().all()):
             anomaly = anomaly - columns[term]
     table = pd.DataFrame({**columns, "anomaly_nt": anomaly})
     columns["anomaly_nt"], columns["sigma_anomaly_nt"] = anomaly, total_sigma(table)
@@ -479,8 +479,6 @@ def project_lines(
     if settings.azimuth_deg is not None and chosen.any():
         common = projection.middle(lat[chosen], lon[chosen])
     anomaly, error = table["anomaly_nt"].to_numpy(float), table["sigma_position_m"].to_numpy(float)
-    bare = table["total_field_nt"].to_numpy(float) - table["main_field_nt"].to_numpy(float)
-    bare[rejected(table["flags"].to_numpy())] = np.nan
     distance, offset, sigma = (np.full(len(table), np.nan) for _ in range(3))
     frames = {}
     for number, own in enumerate(line_rows(index, count)):
@@ -489,8 +487,7 @@ def project_lines(
             continue
         distance[own], offset[own], frames[number] = place_line(lat[own], lon[own], settings, common)
         path = geodesy.path_length(lat[own], lon[own])
-        value = anomaly[own] if np.isfinite(anomaly[own]).any() else bare[own]  # a line without a level
-        sigma[own] = np.abs(along_track_gradient(path, value, settings.gradient_window_m)) * error[own]
+        sigma[own] = np.abs(along_track_gradient(path, anomaly[own], settings.gradient_window_m)) * error[own]
     return table.assign(distance_km=distance, offset_km=offset, sigma_position_nt=sigma), frames
 
 
@@ -518,10 +515,7 @@ def _tell(job: stage.Job, wanted: list[str], told: list[dict]) -> None:
         job.note(f"no profile, for want of kept readings with a position: {_listed(without)}.")
     unlevelled = [row["line"] for row in told if row["no_level"]] if "level_nt" not in job.record["absent"] else []
     if unlevelled:
-        job.note(
-            f"without a level term, and so without an anomaly, though with all other terms: {_listed(unlevelled)}. "
-            "A line in levelling.hold has a level of zero."
-        )
+        job.note(f"not levelled, for want of a usable crossing, though with all other terms: {_listed(unlevelled)}.")
     right = [(row["line"], row["azimuth_deg"]) for row in told if row["own"]]
     right = [
         (line, azimuth)
