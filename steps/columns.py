@@ -58,7 +58,7 @@ FLAG_MEANINGS = {
     Flag.NO_CABLE: "cable-out not known",
     Flag.SETTLING: "towed sensor's path not yet settled after a start, a gap or a change of cable",
     Flag.COURSE_FOR_HEADING: "no gyro heading: course over ground used instead",
-    Flag.NO_DIURNAL: "no base station record at this time: diurnal term missing",
+    Flag.NO_DIURNAL: "diurnal term missing: no base station has a record at this time, or no position",
     Flag.DISTURBED: "magnetically disturbed at the base station",
     Flag.NO_HEADING: "heading effect not determined: term missing",
     Flag.NO_LEVEL: "line without a usable crossing: level term missing",

@@ -101,11 +101,16 @@ def predict(
     Prediction
 
     """
-    pieces = [
-        _predict_piece(stations, time_s[k : k + PIECE], lat[k : k + PIECE], lon[k : k + PIECE], settings)
-        for k in range(0, max(1, len(time_s)), PIECE)
-    ]
-    return Prediction(*(np.concatenate([getattr(p, part.name) for p in pieces]) for part in fields(Prediction)))
+    placed = np.flatnonzero(np.isfinite(lat) & np.isfinite(lon))
+    found = Prediction(
+        *(np.full(len(time_s), nothing) for nothing in (np.nan, np.nan, np.nan, False, -1))  # in the fields' order
+    )
+    for k in range(0, len(placed), PIECE):
+        here = placed[k : k + PIECE]
+        piece = _predict_piece(stations, time_s[here], lat[here], lon[here], settings)
+        for part in fields(Prediction):
+            getattr(found, part.name)[here] = getattr(piece, part.name)
+    return found
 
 
 def _predict_piece(stations, time_s, lat, lon, settings) -> Prediction:
@@ -115,7 +120,7 @@ def _predict_piece(stations, time_s, lat, lon, settings) -> Prediction:
     for k, station in enumerate(stations):
         late_s = _shift_s(station, lon) if settings.local_time_shift else None
         own, margin = _variation_at(station, time_s, late_s)
-        known = np.isfinite(own) & np.isfinite(lat)
+        known = np.isfinite(own)
         if not known.any():
             continue
         value[k] = np.where(known, own, 0.0)
@@ -381,7 +386,7 @@ def make_stations(records: list, span_s: tuple[float, float], *, settings: Diurn
 
 def main(job: stage.Job) -> None:
     """Read the base stations and predict the variation at every reading."""
-    time = job.table("readings", ["time_utc"])["time_utc"].to_numpy()
+    time = job.table("readings", ["time_utc"])["time_utc"].to_numpy().astype("datetime64[ns]")
     lat, lon = job.table("position", ["sensor_latitude_deg", "sensor_longitude_deg"]).to_numpy().T
     if not job.settings.base_stations:
         missing = np.full(len(time), np.nan)
