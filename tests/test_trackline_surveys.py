@@ -94,7 +94,7 @@ def test_what_is_missing_is_said(reduced):
     assert "there is no base station: the diurnal term is missing" in told
     assert "the survey has no calibration line" in told
     text = next((own / "csv").glob("*.csv")).read_text(encoding="utf-8")
-    assert "diurnal (there is no base station" in text
+    assert "Not subtracted, for the whole survey: diurnal (" in text
     assert "Traceback" not in told
 
 
