@@ -24,7 +24,7 @@ import numpy as np
 import pandas as pd
 
 from steps import __version__, edits, geodesy, main_field, projection, provenance, stage
-from steps.columns import TABLES, Flag
+from steps.columns import REJECTING, TABLES, Flag
 from steps.formats.profile_csv import as_csv, file_names, one_line
 from steps.resampling import EvenSamples, even_samples
 from steps.screen import rejected
@@ -37,6 +37,7 @@ TERMS = {
     "heading_nt": ("heading", "heading", Flag.NO_HEADING),
     "level_nt": ("level", "levelling", Flag.NO_LEVEL),
 }
+REASONS = np.uint32(REJECTING | Flag.NO_NAVIGATION | Flag.NO_CABLE)  # why a sample may be missing
 APART = ("sigma_diurnal_nt", "sigma_heading_nt", "sigma_level_nt")
 SHARED = ("sigma_position_nt", *APART, "sigma_joint_nt", "sigma_datum_nt")  # errors that neighbours share
 WIDEST_DEPARTURE_DEG = 45.0  # of a line from the stated azimuth
@@ -247,9 +248,8 @@ def make_profile(line: pd.DataFrame, frame: dict, settings: Profiles, absent: li
     steps = {"spacing_km": settings.spacing_km, "longest_gap_km": settings.longest_gap_km}
     span = (x[usable].min(), x[usable].max())
     whole = even_samples(x, usable, **steps, between_km=span)
-    cell = np.rint((x - whole.at_km[0]) / settings.spacing_km) if len(whole.at_km) else np.full(len(x), np.nan)
-    inside = np.isfinite(cell) & (cell >= 0) & (cell < len(whole.at_km))
-    cell = np.where(inside, cell, 0).astype(np.int64)
+    time = line["time_utc"].to_numpy().astype("datetime64[ns]").astype(np.int64)
+    cell, inside = _cells(np.interp(time, time[np.isfinite(x)], x[np.isfinite(x)]), whole.at_km, settings.spacing_km)
     known: dict[bytes, EvenSamples] = {usable.tobytes(): whole}
 
     def samples(name: str, strict: bool = False) -> np.ndarray:
@@ -266,7 +266,6 @@ def make_profile(line: pd.DataFrame, frame: dict, settings: Profiles, absent: li
 
     place = geodesy.to_vectors(line["sensor_latitude_deg"].to_numpy(), line["sensor_longitude_deg"].to_numpy())
     lat, lon = geodesy.to_degrees(whole.mean(place.T).T)
-    time = line["time_utc"].to_numpy().astype("datetime64[ns]").astype(np.int64)
     seconds = np.nan_to_num(whole.mean((time - time[0]) / 1e9))
     when = time[0] + np.rint(seconds * 1e9).astype(np.int64)
     columns = {
@@ -304,14 +303,21 @@ def _ambient(columns: dict[str, np.ndarray]) -> dict[str, np.ndarray]:
     return result
 
 
+def _cells(x, at_km, spacing_km) -> tuple[np.ndarray, np.ndarray]:
+    """Return the nearest sample to each reading, and whether there is one."""
+    if len(at_km) == 0:
+        return np.zeros(len(x), np.int64), np.zeros(len(x), bool)
+    cell = np.rint((x - at_km[0]) / spacing_km).astype(np.int64)
+    inside = (cell >= 0) & (cell < len(at_km))
+    return np.where(inside, cell, 0), inside
+
+
 def _flags(flags, cell, inside, usable, present) -> np.ndarray:
     """Unite the flags about each sample: of the readings used, or, where there is no sample, of all that there are."""
     result = np.zeros(len(present), np.uint32)
-    count = np.zeros(len(present), np.int64)
-    wanted = inside & (usable | ~present[cell])
+    wanted = inside & (usable | ~present[cell]) if len(present) else inside
     np.bitwise_or.at(result, cell[wanted], flags[wanted].astype(np.uint32))
-    np.add.at(count, cell[inside], 1)
-    result[~present & (count == 0)] = np.uint32(Flag.DROPOUT)
+    result[~present & ((result & REASONS) == 0)] |= np.uint32(Flag.DROPOUT)
     return result
 
 
@@ -348,18 +354,15 @@ def made_by(records: dict[str, dict], key: str | None) -> dict:
     return {"software": f"Stripeline {__version__}", "stages": stages, "inputs": inputs, "edits": own}
 
 
-def header(
-    line: str, kind: str, survey: dict, frame: dict, settings: Profiles, absent: dict, origin: dict
-) -> list[str]:
+def header(profile: dict, survey: dict, settings: Profiles, absent: dict[str, str], origin: dict) -> list[str]:
     """Return the lines that head a line's file, without the explanation of its columns.
 
     Parameters
     ----------
-    line, kind : str
+    profile : dict
+        The line's entry in the record: line, kind, no_level, and the keys of `place_line`.
     survey : dict
         Name, vessel, institution, processor, comment.
-    frame : dict
-        Of `place_line`.
     settings : Profiles
     absent : dict of str to str
         Terms that the survey has not, with the reason.
@@ -367,21 +370,22 @@ def header(
         Of `made_by`.
 
     """
-    which = "that fits the line best, from its own end" if frame["own"] else "of the azimuth stated for the survey"
-    lat, lon = frame["origin_latitude_deg"], frame["origin_longitude_deg"]
+    which = "that fits the line best, from its own end" if profile["own"] else "of the azimuth stated for the survey"
+    lat, lon = profile["origin_latitude_deg"], profile["origin_longitude_deg"]
     told = [("Survey", "name"), ("Vessel", "vessel"), ("Institution", "institution"), ("Processor", "processor")]
     rows = [
         "Marine magnetic anomaly profile",
         *(f"{label}: {survey[name]}" for label, name in [*told, ("Comment", "comment")] if survey.get(name)),
-        f"Line: {line}",
-        f"Kind: {kind}",
-        f"Azimuth: {frame['azimuth_deg']:.4f} degrees at the origin; distance grows in it, whatever way the ship ran",
+        f"Line: {profile['line']}",
+        f"Kind: {profile['kind']}",
+        f"Azimuth: {profile['azimuth_deg']:.4f} degrees at the origin; distance grows in it, whatever way the ship ran",
         f"Origin: latitude {lat:.7f}, longitude {lon:.7f} degrees",
         f"Distance: geodesic (WGS 84) along the geodesic {which}",
         f"Samples: every {settings.spacing_km:g} km; wavelengths of {3.4 * settings.spacing_km:g} km and more pass "
         f"with a gain within 1 %, those under {2 * settings.spacing_km:g} km with under 1 %; gaps longer than "
         f"{settings.longest_gap_km:g} km stay empty",
         *SAID,
+        *(["Not levelled: no usable crossing; the anomaly holds the line's own level error"] * profile["no_level"]),
         *(f"Not subtracted, for the whole survey: {TERMS[term][0]} ({reason})" for term, reason in absent.items()),
         f"Software: {origin['software']}",
         *(f"Stage {s['stage']}: code {s['code']}, settings sha256 {s['settings_sha256']}" for s in origin["stages"]),
@@ -431,10 +435,10 @@ def main(job: stage.Job) -> None:
         profile = make_profile(table.iloc[rows[number]], frames[number], own, missing)
         if not profile["total_field_nt"].notna().any():
             continue
-        head = header(line, kind, job.survey, frames[number], own, absent, origin)
-        (folder / f"{files[number]}.csv").write_bytes(as_csv(profile, head))
-        parts.append(profile.assign(line=line, kind=kind))
         told.append(_summary(line, kind, f"{files[number]}.csv", profile) | frames[number])
+        head = header(told[-1], job.survey, own, absent, origin)
+        (folder / told[-1]["file"]).write_bytes(as_csv(profile, head))
+        parts.append(profile.assign(line=line, kind=kind))
     empty = pd.DataFrame({name: [] for name in TABLES["profiles"]})
     job.write("corrected", table)
     job.write("profiles", pd.concat(parts, ignore_index=True) if parts else empty)
@@ -496,14 +500,14 @@ def _summary(line: str, kind: str, file: str, profile: pd.DataFrame) -> dict:
     anomaly, sigma = profile["anomaly_nt"].to_numpy(), profile["sigma_anomaly_nt"].to_numpy()
     known = np.isfinite(anomaly)
     return {
-        "line": line,
-        "kind": kind,
+        "line": str(line),
+        "kind": str(kind),
         "file": file,
         "samples": len(profile),
         "missing": int((~known).sum()),
         "length_km": float(np.ptp(profile["distance_km"])),
         "sigma_nt": float(np.median(sigma[known])) if known.any() else None,
-        "no_level": bool(profile["level_nt"].isna().all()),
+        "no_level": bool(profile["level_nt"].isna().all()),  # of the survey too, where none is levelled
     }
 
 

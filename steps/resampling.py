@@ -4,8 +4,8 @@ Between neighbouring readings the quantity is taken as straight, and that broken
 windowed-sinc kernel (Kaiser window; Kaiser & Schafer 1980, IEEE Trans. ASSP 28). With samples every h, wavelengths of
 3.4 h and more pass with a gain within 1 % of one, 2.5 h with a half, and those of 2 h (the new Nyquist) and less with
 under 1 %. Level and slope are kept at every sample; beside an end or a gap the broken line is continued by its
-reflection in the point that a straight fit to the last h gives. All is linear, so that samples are a sparse matrix of
-weights on the readings, from which the noise of each sample follows.
+reflection in the point that a straight fit to the last h gives; a stretch shorter than h is a straight line. All is
+linear, so that samples are a sparse matrix of weights on the readings, from which the noise of each sample follows.
 """
 
 import functools
@@ -93,7 +93,7 @@ def even_samples(
     usable = np.isfinite(x) if usable is None else usable & np.isfinite(x)
     index = once_run(x, np.flatnonzero(usable), spacing_km)
     span = between_km or ((x[index[0]], x[index[-1]]) if len(index) else (0.0, -spacing_km))
-    ticks = np.arange(np.ceil(span[0] / spacing_km - 1e-6), np.floor(span[1] / spacing_km + 1e-6) + 1)
+    ticks = np.arange(np.ceil(span[0] / spacing_km - 1e-6), np.floor(span[1] / spacing_km + 1e-6) + 1) + 0.0
     present = np.zeros(len(ticks), bool)
     blocks, done = [], 0
     for run in np.split(index, np.flatnonzero(np.diff(x[index]) > longest_gap_km) + 1):
@@ -167,7 +167,7 @@ def once_run(x: np.ndarray, index: np.ndarray, spacing: float) -> np.ndarray:
 
 def _weights(x: np.ndarray, ticks: np.ndarray):
     """Return the sparse weights of one run of readings at `x`, in spacings and in order, in samples at `ticks`."""
-    from scipy.sparse import csr_array, eye_array, vstack
+    from scipy.sparse import csr_array
 
     # readings that are all but at one place become one node
     cell = np.floor((x - x[0]) * CELLS).astype(np.int64)
@@ -179,32 +179,53 @@ def _weights(x: np.ndarray, ticks: np.ndarray):
     s = np.bincount(node, x) / count
     average = csr_array((1.0 / count[node], (node, np.arange(len(x)))), shape=(len(count), len(x)))
 
-    ends = [_reflections(s), _reflections(-s[::-1])]
-    before, after = ends[0][0][::-1], -ends[1][0]
-    continued = vstack([ends[0][1][::-1], eye_array(len(s), format="csr"), ends[1][1][:, ::-1]], format="csr")
-    return csr_array(_kernel_weights(np.concatenate([before, s, after]), ticks) @ continued @ average)
+    if s[-1] - s[0] < 1.0:
+        return csr_array(_straight(s, ticks)) @ average
+    places, continued = _continued(s)
+    return csr_array(_kernel_weights(places, ticks) @ continued @ average)
 
 
-def _reflections(s: np.ndarray):
-    """Return the places of the nodes reflected in the first one, outwards, and their values as weights on the nodes."""
-    from scipy.sparse import csr_array
+def _straight(s: np.ndarray, at: np.ndarray) -> np.ndarray:
+    """Return the weights of nodes in the straight line of least squares through them, at places; one row a place."""
+    off = s - s.mean()
+    return 1 / len(s) + np.outer(at - s.mean(), off) / (off @ off)
 
-    source = np.arange(1, max(2, np.searchsorted(s, s[0] + HALF_WIDTH + 1)))
-    near = np.arange(np.searchsorted(s, s[0] + 1.0, side="right"))
-    if len(near) < 3:
-        near, end = np.array([0]), np.array([1.0])
-    else:
-        off = s[near] - s[near].mean()
-        end = 1 / len(near) + off[0] * off / (off @ off)
-    row, k = np.arange(len(source)), len(near)
-    values = csr_array(
-        (
-            np.concatenate([np.tile(2 * end, len(source)), -np.ones(len(source))]),
-            (np.concatenate([np.repeat(row, k), row]), np.concatenate([np.tile(near, len(source)), source])),
-        ),
-        shape=(len(source), len(s)),
-    )
-    return 2 * s[0] - s[source], values
+
+def _continued(s: np.ndarray):
+    """Continue nodes beyond both ends by reflection in the fitted end points, as far as the kernel reaches.
+
+    Returns
+    -------
+    places : array, shape (q,)
+        In order, the nodes themselves among them.
+    values : sparse array, shape (q, m)
+        As weights on the nodes.
+
+    """
+    from scipy.sparse import csr_array, eye_array, vstack
+
+    reach = HALF_WIDTH + 1
+    ends = []
+    for side in (s, -s[::-1]):
+        near = np.arange(np.searchsorted(side, side[0] + 1.0, side="right"))
+        weight = _straight(side[near], side[:1])[0] if len(near) > 2 else (near == 0) * 1.0
+        ends.append(np.append(weight, np.zeros(len(s) - len(near))))
+    ends = [csr_array(ends[0][None]), csr_array(ends[1][None, ::-1])]
+    places, values = s, eye_array(len(s), format="csr")
+    while places[0] > s[0] - reach or places[-1] < s[-1] + reach:
+        for end, weight in zip((s[0], s[-1]), ends, strict=True):
+            first = end == s[0]
+            beyond = places > end if first else places < end
+            beyond &= np.abs(places - end) < reach + (s[-1] - s[0])
+            source = np.flatnonzero(beyond)[::-1]
+            twice = csr_array(np.full((len(source), 1), 2.0)) @ weight
+            mirrored = 2 * end - places[source], csr_array(twice - values[source])
+            own = np.flatnonzero(places >= end if first else places <= end)
+            kept = places[own], values[own]
+            parts = (mirrored, kept) if first else (kept, mirrored)
+            places = np.concatenate([part[0] for part in parts])
+            values = vstack([part[1] for part in parts], format="csr")
+    return places, values
 
 
 def _kernel_weights(s: np.ndarray, ticks: np.ndarray):
