@@ -274,7 +274,9 @@ def main(job: stage.Job) -> None:
         "rms of the crossings used, left out, nT": rms(crossings["left_out_nt"]),
     }
     whole, before, after, left_out = found.values()
-    told = f"{number(before)} nT before levelling, {number(after)} nT after, {number(left_out)} nT left out"
+    told = "no crossing was used"
+    if used.any():
+        told = f"{number(before)} nT before levelling, {number(after)} nT after, {number(left_out)} nT left out"
     several = len(keys) > 1
     ordered = sorted(
         records.items(), key=lambda item: (keys.index(item[0][0]) if item[0][0] else -1, STAGES.index(item[0][1]))
@@ -322,7 +324,18 @@ def main(job: stage.Job) -> None:
         what = [f"{name} {number(a)} -> {number(b)}" for name, a, b in changes["figures"] if "rms" in name]
         if what:
             print(f"against the run before: {'; '.join(what)}")
-    job.done(f"crossing rms {told}; look at reduced/report.html")
+    job.done(f"mismatch of the crossings used, rms: {told}")
+    first = [f"{name}: {sentence}" for name, sentence in sorted(content["notes"], key=_weight)][:3]
+    job.closing = [
+        "Results are in reduced/; open reduced/report.html.",
+        *(["Deserves a look first:", *(f"  {sentence}" for sentence in first)] if first else []),
+    ]
+
+
+def _weight(note: tuple[str, str]) -> int:
+    """Put notes of late stages first: what they say concerns whole lines."""
+    stage_name = note[0].split(",")[0]
+    return -STAGES.index(stage_name) if stage_name in STAGES else 0
 
 
 def _edits_text(job: stage.Job) -> str:
