@@ -1,14 +1,13 @@
 """Read delimited text files of any layout, as loggers write them.
 
-The fast path hands whole columns to pyarrow; only when something is wrong are single rows looked at, to name file, row
-and column. Nothing is guessed: a cell that is no number and no missing-value code stops the reading.
+Whole columns are handed to pyarrow; only where that meets something odd are cells looked at as text, and only where
+something is wrong are rows looked at singly, to name file, row and column. Nothing is guessed: a cell that is neither a
+number nor a code for "no value" stops the reading. A last row that was cut short is left out and counted.
 """
 
-import difflib
-import gzip
-import io
-import zlib
-from dataclasses import dataclass, field
+import csv as standard
+import re
+from dataclasses import dataclass
 from pathlib import Path
 
 import numpy as np
@@ -18,23 +17,51 @@ import pyarrow.compute as pc
 from pyarrow import csv
 
 from steps.errors import SurveyError, mistake
-from steps.formats.tables import parse_time
+from steps.formats import timestamps
+from steps.formats.packed import read_bytes
+from steps.formats.tables import MOST_MISTAKES, nearest
 from steps.settings import Delimited
 
-LARGEST_BYTES = 4_000_000_000  # of one file after unpacking: a gzip bomb ends here
-LARGEST_RATIO = 200  # text of records does not pack better than this
-MOST_MISTAKES = 10
-ANGLES = {"latitude_deg": ("N", "S", 90.0), "longitude_deg": ("E", "W", 180.0)}
+BLOCK_BYTES = 1 << 20  # what pyarrow splits at a time; times are read in the same pieces
+LONGEST_ROW = 1 << 16  # bytes
+EPOCH_LIMIT_S = 7.2e9  # seconds since 1970 within the years that are read; milliseconds are far above
+ANGLES = {"latitude_deg": "NS", "longitude_deg": "EW"}
+NUMBER = r"^[+-]?([0-9]+\.?[0-9]*|\.[0-9]+)([eE][+-]?[0-9]+)?$"
+MARKS = {".": "point", ",": "comma"}
+NO_VALUE = "Add the word to `missing` if it means: no value."
 
 
 @dataclass
 class Text:
-    """A file's rows of data as bytes: what is parsed, and which row of the file each was."""
+    """The records of a file, as bytes to split, with the row of the file that each was."""
 
-    data: bytes
+    data: bytes | memoryview
     rows: np.ndarray
     names: list[str]
-    counts: dict[str, int] = field(default_factory=dict)
+    heading_row: int
+    counts: dict[str, int]
+    quoted: bool
+
+
+@dataclass
+class Place:
+    """A column of a file, for messages; `wrong` gathers the mistakes of all columns."""
+
+    where: str
+    name: str
+    rows: np.ndarray
+    wrong: list[str]
+
+    def tell(self, bad: np.ndarray, cells: pa.Array, must: str, remedy: str = "") -> None:
+        """Say what is wrong with the cells that are marked: of many the first ones."""
+        found = np.flatnonzero(bad)
+        for k in found[:MOST_MISTAKES].tolist():
+            place = f"{self.where} row {self.rows[k]}, {self.name}"
+            got = cells[k].as_py()
+            got = "an empty cell" if got == "" else "no value" if got is None else got
+            self.wrong.append(mistake(place, must, got, remedy if k == found[0] else ""))
+        if len(found) > MOST_MISTAKES:
+            self.wrong.append(f"{self.where}, {self.name}: and {len(found) - MOST_MISTAKES} more.")
 
 
 def read_delimited(path: str | Path, spec: Delimited, columns: dict[str, str]) -> tuple[pd.DataFrame, dict[str, int]]:
@@ -47,403 +74,442 @@ def read_delimited(path: str | Path, spec: Delimited, columns: dict[str, str]) -
     spec : Delimited
         Delimiter, heading, time columns, missing-value codes and the rest.
     columns : dict of str to str
-        Which column of the file holds which quantity. ``latitude_deg`` and ``longitude_deg`` may be decimal degrees or
-        degrees and minutes with a letter; longitudes come back in [-180, 180).
+        Which column of the file holds which quantity. ``latitude_deg`` and ``longitude_deg`` may be decimal degrees, or
+        degrees, minutes and seconds with a letter; longitudes come back in [-180, 180).
 
     Returns
     -------
     table : pandas.DataFrame
         ``time`` (datetime64[ns], as logged), the quantities (float64, NaN where missing), ``source_row``.
     counts : dict of str to int
-        ``rows`` of the file; how many were ``records``, ``heading``, ``comment``, ``blank``, ``truncated``.
+        ``rows`` of the file, and how many were ``records`` (rows of the table), ``heading`` (with the skipped rows),
+        ``comment``, ``blank``, ``truncated`` (a last row cut short) or ``without time``: these add up to it.
 
     Raises
     ------
     SurveyError
-        With one sentence for each mistake, up to ten.
+        With one sentence for each mistake, of many the first ones.
 
     """
-    path = Path(path)
-    text = _rows(_load(path, spec.encoding), spec, str(path))
     where = str(path)
+    text = _records(_as_utf8(read_bytes(path), spec.encoding, where), spec, where)
     needed = list(dict.fromkeys([*spec.time.columns, *columns.values()]))
-    unknown = [name for name in needed if name not in text.names]
-    if unknown:
-        wrong = []
-        for name in unknown:
-            near = difflib.get_close_matches(name, text.names, n=1)
-            remedy = f"Did you mean {near[0]}?" if near else "Mend the name in survey.yaml, or its delimiter."
-            wrong.append(mistake(where, f"must have a column {name}", ", ".join(text.names), remedy))
-        raise SurveyError(*wrong)
-    if text.counts["records"] == 0:
-        raise SurveyError(
-            mistake(where, "must hold at least one record", "none", "Remove the file or mend `skip_rows`.")
-        )
-    table = _parse(text, needed, spec, where)
-    missing = pa.array([word.strip() for word in spec.missing], pa.string())
-    found: dict[str, np.ndarray] = {"time": _times([table[name] for name in spec.time.columns], spec, text, where)}
+    _check_names(needed, text, where)
+    if len(text.rows) == 0:
+        remedy = "Remove the file, or mend `skip_rows`."
+        raise SurveyError(mistake(where, "must hold at least one record", "none", remedy))
+    table = _split_all(text, needed, columns, spec, where)
+    wrong: list[str] = []
+    time, absent = _times(table, spec, Place(where, ", ".join(spec.time.columns), text.rows, wrong))
+    found = {"time": time}
     for quantity, name in columns.items():
-        convert = _angles if quantity in ANGLES else _numbers
-        found[quantity] = convert(table[name], missing, spec, text, f"{where}", name, quantity)
-    found["source_row"] = text.rows
-    return pd.DataFrame(found), text.counts
+        place = Place(where, name, text.rows, wrong)
+        if quantity in ANGLES:
+            found[quantity] = _angles(table[name], spec, place, quantity)
+        else:
+            found[quantity] = _numbers(table[name], spec, place)
+    if wrong:
+        first = f"{where} row {text.rows[0]},"
+        if text.heading_row and len(text.rows) > 1 and all(sentence.startswith(first) for sentence in wrong):
+            wrong.append(f"{where}: if row {text.rows[0]} holds units, give `names` and count it among `skip_rows`.")
+        raise SurveyError(*wrong[: 2 * MOST_MISTAKES])
+    if absent.all():
+        raise SurveyError(mistake(where, f"must hold times in {', '.join(spec.time.columns)}", "no value in any row"))
+    whole = pd.DataFrame(found | {"source_row": text.rows})
+    if absent.any():
+        whole = whole[~absent].reset_index(drop=True)
+    counts = text.counts | {"without time": int(absent.sum()), "records": len(whole)}
+    if counts["rows"] != sum(number for name, number in counts.items() if name != "rows"):
+        raise RuntimeError(f"{where}: rows are not all accounted for: {counts}")
+    return whole, counts
 
 
-def _load(path: Path, encoding: str) -> bytes:
-    """Return a file's text as UTF-8 bytes, unpacked, without a byte-order mark."""
-    data = path.read_bytes()
-    if data[:2] == b"\x1f\x8b":
-        limit = min(LARGEST_BYTES, max(1_000_000, LARGEST_RATIO * len(data)))
-        try:
-            with gzip.open(io.BytesIO(data)) as packed:
-                data = packed.read(limit + 1)
-        except (OSError, EOFError, zlib.error) as error:
-            raise SurveyError(mistake(str(path), "must be a whole gzip file", error, "Copy it again.")) from error
-        if len(data) > limit:
-            raise SurveyError(mistake(str(path), f"must unpack to under {limit} bytes", "more"))
-    if not data.strip():
-        raise SurveyError(mistake(str(path), "must hold records", "an empty file", "Remove it, or copy it again."))
-    if encoding.lower() not in ("utf-8", "utf8", "ascii") or data[:2] in (b"\xff\xfe", b"\xfe\xff"):
-        if data[:2] in (b"\xff\xfe", b"\xfe\xff"):
-            encoding = "utf-16"
+# -- rows ------------------------------------------------------------------------------------------------------------
+
+
+def _as_utf8(data: bytes, encoding: str, where: str) -> bytes:
+    """Return a file's text as UTF-8, without a byte-order mark."""
+    if data[:2] in (b"\xff\xfe", b"\xfe\xff"):
+        encoding = "utf-16"
+    if encoding.lower().replace("_", "-") not in ("utf-8", "utf8", "ascii", "us-ascii"):
         try:
             data = data.decode(encoding).encode("utf-8")
-        except (UnicodeDecodeError, LookupError) as error:
-            raise SurveyError(mistake(str(path), f"must be text in {encoding}", error, "Mend `encoding`.")) from error
-    else:
+        except (UnicodeError, LookupError) as error:
+            said = str(error).partition(":")[0] if isinstance(error, UnicodeError) else error
+            raise SurveyError(mistake(where, f"must be text in {encoding}", said, "Mend `encoding`.")) from error
+    elif not data.isascii():
         try:
             data.decode("utf-8")
         except UnicodeDecodeError as error:
             row = data[: error.start].count(b"\n") + 1
-            byte = f"byte {data[error.start]:#04x}"
-            raise SurveyError(
-                mistake(f"{path} row {row}", "must be UTF-8 text", byte, "Name its `encoding`, such as latin-1.")
-            ) from error
+            got = f"byte {data[error.start]:#04x}"
+            remedy = "Name its `encoding`, such as latin-1."
+            raise SurveyError(mistake(f"{where} row {row}", "must be UTF-8 text", got, remedy)) from error
+    data = data.removeprefix(b"\xef\xbb\xbf")
+    if not data[:999].strip() and not data.strip():
+        raise SurveyError(mistake(where, "must hold records", "an empty file", "Remove it, or copy it again."))
     if b"\0" in data:
         row = data[: data.index(b"\0")].count(b"\n") + 1
-        raise SurveyError(mistake(f"{path} row {row}", "must be text", "a zero byte", "Is it a binary file?"))
-    return data.removeprefix(b"\xef\xbb\xbf")
+        remedy = "Is it a binary file, or one that was not closed? Copy it again."
+        raise SurveyError(mistake(f"{where} row {row}", "must be text", "a zero byte", remedy))
+    return data.removesuffix(b"\x1a") or data  # how DOS ended a file
 
 
-def _rows(data: bytes, spec: Delimited, where: str) -> Text:
-    """Take the heading off and leave comments and blank rows out, keeping count of the rows."""
-    if b"\r" in data:
+def _records(data: bytes, spec: Delimited, where: str) -> Text:
+    """Take skipped rows, heading, comments and blank rows off, keeping count of the rows."""
+    if b"\r" in data and data.count(b"\r") != data.count(b"\r\n"):
         data = data.replace(b"\r\n", b"\n").replace(b"\r", b"\n")
-    ends_well = data.endswith(b"\n")
-    if not ends_well:
-        data += b"\n"
     buffer = np.frombuffer(data, np.uint8)
     ends = np.flatnonzero(buffer == 10)
+    closed = data.endswith(b"\n")
+    if not closed:
+        ends = np.append(ends, len(data))
     starts = np.concatenate([[0], ends[:-1] + 1])
-    number = np.arange(1, len(ends) + 1)
-    blank = _is_blank(buffer, starts, ends)
-    comment = np.zeros(len(ends), bool)
-    if spec.comment:
-        comment = ~blank & (buffer[np.minimum(starts, len(buffer) - 1)] == ord(spec.comment))
-    skipped = number <= spec.skip_rows
-    data_rows = ~blank & ~comment & ~skipped
-    counts = {"rows": len(ends), "heading": 0, "truncated": 0}
-    counts["blank"] = int((blank & ~skipped).sum())
-    counts["comment"] = int((comment & ~skipped).sum())
-    counts["heading"] = int(skipped.sum())
+    longest = int((ends - starts).max())
+    if longest > LONGEST_ROW:
+        row = int(np.argmax(ends - starts)) + 1
+        must = f"must have under {LONGEST_ROW} characters in a row"
+        raise SurveyError(mistake(f"{where} row {row}", must, longest, "Is it a text file?"))
+    at = _first_of_row(buffer, starts, ends, spec.delimiter)
+    blank = at >= ends
+    mark = buffer[np.minimum(at, len(buffer) - 1)]
+    comment = ~blank & (mark == ord(spec.comment)) if spec.comment else np.zeros(len(ends), bool)
+    use = ~(blank | comment)
+    use[: spec.skip_rows] = False
+    chosen = np.flatnonzero(use)
+    counts = {"rows": len(ends), "heading": min(spec.skip_rows, len(ends)), "truncated": 0}
+    counts["blank"] = int(blank[spec.skip_rows :].sum())
+    counts["comment"] = int(comment[spec.skip_rows :].sum())
+
+    def row(k: int) -> str:
+        return data[starts[k] : ends[k]].decode("utf-8")
+
+    heading_row = 0
     if spec.names is None:
-        first = np.flatnonzero(data_rows)
-        if len(first) == 0:
+        if len(chosen) == 0:
             raise SurveyError(mistake(where, "must have a heading row after the skipped rows", "none"))
-        head = data[starts[first[0]] : ends[first[0]]].decode("utf-8")
-        names = _split(head, spec)
-        data_rows[first[0]] = False
+        heading_row = int(chosen[0]) + 1
+        names, chosen = split(row(chosen[0]), spec), chosen[1:]
         counts["heading"] += 1
-        repeated = sorted({name for name in names if name and names.count(name) > 1})
-        if repeated:
-            place = f"{where} row {number[first[0]]}"
-            raise SurveyError(mistake(place, "must name each column once", ", ".join(repeated)))
     else:
         names = list(spec.names)
-    if data_rows.all():
-        kept = data
-    else:
-        mask = np.repeat(data_rows, ends - starts + 1)
-        kept = buffer[mask].tobytes()
-    rows = number[data_rows]
-    if not ends_well and len(rows) and rows[-1] == number[-1]:
-        last = data[starts[-1] : ends[-1]].decode("utf-8")
-        if len(_split(last, spec)) != len(names):  # a record cut off when the logger stopped
-            kept = kept[: len(kept) - int(ends[-1] - starts[-1] + 1)]
-            rows = rows[:-1]
-            counts["truncated"] = 1
-    counts["records"] = len(rows)
+    if len(chosen):
+        names = _names_of_all(names, split(row(chosen[0]), spec))
+    if not closed and len(chosen) and chosen[-1] == len(ends) - 1:
+        before = split(row(chosen[-2]), spec) if len(chosen) > 1 else []
+        if _cut_short(split(row(chosen[-1]), spec), before, len(names)):
+            chosen, counts["truncated"] = chosen[:-1], 1
+    kept = _cut_out(data, starts, ends, chosen)
     if spec.delimiter == "space":
-        kept = b"\n".join(b" ".join(line.split()) for line in kept.split(b"\n"))
-    return Text(kept, rows, names, counts)
+        return Text(_single_blanks(kept), chosen + 1, names, heading_row, counts, False)
+    return Text(kept, chosen + 1, names, heading_row, counts, _has_quotes(data, _delimiter(spec)))
 
 
-def _is_blank(buffer: np.ndarray, starts: np.ndarray, ends: np.ndarray) -> np.ndarray:
-    """Tell which rows hold nothing but blanks; only those that start with one are looked at closely."""
-    blank = starts == ends
-    first = buffer[np.minimum(starts, len(buffer) - 1)]
-    for k in np.flatnonzero(~blank & ((first == 32) | (first == 9))):
-        blank[k] = not buffer[starts[k] : ends[k]].tobytes().strip()
-    return blank
+def _first_of_row(buffer, starts, ends, delimiter: str) -> np.ndarray:
+    """Find the first byte of each row that is no blank; the end of the row where all are."""
+    at = starts.copy()
+    blanks = (13, 32) if delimiter == "tab" else (9, 13, 32)
+    first = buffer[starts]
+    rows = np.flatnonzero(first <= 32)
+    for _ in range(64):
+        inside = at[rows] < ends[rows]
+        rows = rows[inside]
+        byte = buffer[at[rows]]
+        rows = rows[np.isin(byte, blanks)]
+        if len(rows) == 0:
+            return at
+        at[rows] += 1
+    for k in rows.tolist():
+        at[k] = ends[k] - len(buffer[at[k] : ends[k]].tobytes().lstrip(bytes(blanks)))
+    return at
+
+
+def _names_of_all(names: list[str], cells: list[str]) -> list[str]:
+    """Let heading and rows differ in delimiters at their end, as some loggers write them."""
+    spare = len(cells) - len(names)
+    if spare > 0 and not any(cells[len(names) :]):
+        return [*names, *[""] * spare]
+    if spare < 0 and not any(names[len(cells) :]):
+        return names[: len(cells)]
+    return names
+
+
+def _cut_short(last: list[str], before: list[str], width: int) -> bool:
+    """Tell whether a last row without a line end was cut off, by the row before it.
+
+    It was if it lacks cells, or if its last cell has fewer decimals, or as a whole number or text fewer characters,
+    than that of the row before: what is left of a number cut off looks like a number.
+    """
+    if len(last) != width or len(last) != len(before):
+        return len(last) != width
+    own, other = last[-1], before[-1]
+    if "." in other:
+        return len(own.partition(".")[2]) < len(other.partition(".")[2])
+    return len(own) < len(other)
+
+
+def _cut_out(data: bytes, starts, ends, chosen) -> bytes | memoryview:
+    """Return the bytes of the chosen rows, without a copy where they follow each other."""
+    if len(chosen) == 0:
+        return b""
+    view = memoryview(data)
+    breaks = np.flatnonzero(np.diff(chosen) != 1)
+    first, last = np.append(0, breaks + 1), np.append(breaks, len(chosen) - 1)
+    if len(first) == 1:
+        return view[starts[chosen[0]] : ends[chosen[-1]] + 1]
+    pairs = zip(starts[chosen[first]].tolist(), (ends[chosen[last]] + 1).tolist(), strict=True)
+    return b"".join([view[a:b] for a, b in pairs])
+
+
+def _single_blanks(data: bytes | memoryview) -> bytes:
+    """Make one blank of each run of blanks and tabs, and none at the beginning and end of a row."""
+    text = np.frombuffer(data, np.uint8)
+    if len(text) == 0:
+        return b""
+    blank = (text == 32) | (text == 9)
+    line_end = (text == 10) | (text == 13)
+    after = np.append(blank[1:] | line_end[1:], True)
+    keep = ~blank | ~after  # of each run the last blank, if a cell follows
+    opening = np.flatnonzero(blank & np.append(True, line_end[:-1]))  # runs at the beginning of a row: not even that
+    cells = np.flatnonzero(~blank)
+    closing = np.append(cells, len(text))[np.searchsorted(cells, opening)] - 1
+    keep[closing] = False
+    kept = text[keep]
+    kept[kept == 9] = 32
+    return kept.tobytes()
+
+
+def split(row: str, spec: Delimited) -> list[str]:
+    """Split one row into cells, without the blanks around them."""
+    if spec.delimiter == "space":
+        return row.split()
+    try:
+        (cells,) = standard.reader([row.rstrip("\r")], delimiter=_delimiter(spec)) or [[]]
+    except (standard.Error, ValueError):
+        cells = row.split(_delimiter(spec))
+    return [cell.strip() for cell in cells]
 
 
 def _delimiter(spec: Delimited) -> str:
     return {"tab": "\t", "space": " "}.get(spec.delimiter, spec.delimiter)
 
 
-def _split(row: str, spec: Delimited) -> list[str]:
-    """Split one row as the parser does."""
-    if spec.delimiter == "space":
-        return row.split()
-    import csv as standard
-
-    (cells,) = standard.reader([row], delimiter=_delimiter(spec)) or [[]]
-    return [cell.strip() for cell in cells]
-
-
-def _parse(text: Text, needed: list[str], spec: Delimited, where: str) -> pa.Table:
-    """Split all rows into columns of text."""
-    bad: list[tuple[int, int, str]] = []
-
-    def refuse(row) -> str:
-        bad.append((len(bad), row.actual_columns, row.text or ""))
-        return "skip"
-
-    table = csv.read_csv(
-        pa.BufferReader(text.data),
-        read_options=csv.ReadOptions(column_names=text.names, use_threads=True, block_size=1 << 24),
-        parse_options=csv.ParseOptions(
-            delimiter=_delimiter(spec), invalid_row_handler=refuse, ignore_empty_lines=False
-        ),
-        convert_options=csv.ConvertOptions(
-            column_types={name: pa.string() for name in needed}, include_columns=needed, strings_can_be_null=False
-        ),
-    )
-    if bad:
-        lines = text.data.split(b"\n")
-        wrong = []
-        for k, line in enumerate(lines[: len(text.rows)]):
-            cells = len(_split(line.decode("utf-8"), spec))
-            if cells != len(text.names):
-                wrong.append(mistake(f"{where} row {text.rows[k]}", f"must have {len(text.names)} cells", cells))
-                if len(wrong) == MOST_MISTAKES:
-                    break
-        raise SurveyError(*(wrong or [mistake(where, f"must have {len(text.names)} cells in every row")]))
-    return table
-
-
-def _stripped(column: pa.ChunkedArray) -> pa.Array:
-    whole = column.combine_chunks()
-    return pc.utf8_trim_whitespace(whole)
-
-
-def _numbers(column, missing, spec, text, where, name, quantity) -> np.ndarray:
-    """Turn a column of text into numbers; missing-value codes become NaN."""
-    cells = _stripped(column)
-    absent = pc.is_in(cells, missing)
-    cells = pc.if_else(absent, None, cells)
-    if spec.decimal == ",":
-        cells = pc.replace_substring(cells, ",", ".")
-    try:
-        values = pc.cast(cells, pa.float64())
-    except pa.ArrowInvalid:
-        _tell(cells, float, text, where, name, "must be a number")
-        raise
-    numbers = values.fill_null(np.nan).to_numpy(zero_copy_only=False)
-    # What was not a missing-value code must be finite: "inf" and "nan" parse as numbers elsewhere.
-    odd = ~np.isfinite(numbers) & ~absent.to_numpy(zero_copy_only=False)
-    if odd.any():
-        k = int(np.flatnonzero(odd)[0])
-        remedy = "Add the word to `missing` if it means: no value."
-        place = f"{where} row {text.rows[k]}, {name}"
-        raise SurveyError(mistake(place, "must be a finite number", cells[k].as_py(), remedy))
-    return numbers
-
-
-def _tell(cells, parse, text: Text, where: str, name: str, must: str) -> None:
-    """Raise the sentences for the cells that cannot be parsed."""
+def _check_names(needed: list[str], text: Text, where: str) -> None:
+    """Refuse a heading that lacks a column, or names one twice."""
     wrong = []
-    for k, cell in enumerate(cells.to_pylist()):
-        if cell is None:
-            continue
-        try:
-            parse(cell)
-        except ValueError:
-            remedy = "Add the word to `missing` if it means: no value." if not wrong else ""
-            wrong.append(mistake(f"{where} row {text.rows[k]}, {name}", must, cell, remedy))
-            if len(wrong) == MOST_MISTAKES:
-                break
+    for name in needed:
+        place = f"{where} row {text.heading_row}" if text.heading_row else where
+        if name not in text.names:
+            near = nearest(name, [known for known in text.names if known])
+            remedy = f"Did you mean {near}?" if near else "Mend the name in survey.yaml, or `delimiter` or `skip_rows`."
+            wrong.append(mistake(place, f"must have a column {name}", ", ".join(text.names), remedy))
+        elif text.names.count(name) > 1:
+            wrong.append(mistake(place, "must name each column once", name))
     if wrong:
         raise SurveyError(*wrong)
 
 
-def _angles(column, missing, spec, text, where, name, quantity) -> np.ndarray:
-    """Turn latitudes or longitudes into decimal degrees: plain numbers, or degrees (and minutes) with a letter."""
-    positive, negative, limit = ANGLES[quantity]
-    cells = _stripped(column)
-    cells = pc.if_else(pc.is_in(cells, missing), None, cells)
-    if spec.decimal == ",":
-        cells = pc.replace_substring(cells, ",", ".")
-    try:
-        values = pc.cast(cells, pa.float64()).fill_null(np.nan).to_numpy(zero_copy_only=False).copy()
-    except pa.ArrowInvalid:
-        letters = f"{positive}{negative}{positive.lower()}{negative.lower()}"
-        pattern = (
-            rf"^(?P<a>[{letters}]?)\s*(?P<sign>-?)(?P<d>\d+(?:\.\d*)?)(?:\s*[°d\s]\s*(?P<m>\d+(?:\.\d*)?)"
-            rf"(?:\s*['\s]\s*(?P<s>\d+(?:\.\d*)?))?)?\s*['\"]*\s*(?P<b>[{letters}]?)$"
-        )
-        parts = cells.to_pandas().str.extract(pattern)
-        good = parts["d"].notna().to_numpy() | cells.is_null().to_numpy(zero_copy_only=False)
-        if not good.all():
-            k = int(np.flatnonzero(~good)[0])
-            must = f"must be degrees such as 51.5042 or 51 30.25 {positive}"
-            raise SurveyError(mistake(f"{where} row {text.rows[k]}, {name}", must, cells[k].as_py())) from None
-        degrees, minutes, seconds = (pd.to_numeric(parts[part]).fillna(0).to_numpy() for part in ("d", "m", "s"))
-        good = (minutes < 60) & (seconds < 60)
-        if not good.all():
-            k = int(np.flatnonzero(~good)[0])
-            place = f"{where} row {text.rows[k]}, {name}"
-            raise SurveyError(mistake(place, "must have minutes and seconds below 60", cells[k].as_py()))
-        letter = (parts["a"].fillna("") + parts["b"].fillna("")).str.upper()
-        south = (letter == negative).to_numpy() ^ (parts["sign"] == "-").to_numpy()
-        values = (degrees + minutes / 60 + seconds / 3600) * np.where(south, -1.0, 1.0)
-        values[cells.is_null().to_numpy(zero_copy_only=False)] = np.nan
-    top = 90.0 if limit == 90.0 else 360.0
-    odd = np.abs(values) > top
-    if odd.any():
-        k = int(np.flatnonzero(odd)[0])
-        must = f"must be between -{top:g} and {top:g} degrees"
-        raise SurveyError(mistake(f"{where} row {text.rows[k]}, {name}", must, cells[k].as_py()))
-    if limit == 180.0:
-        values = (values + 180.0) % 360.0 - 180.0
-    return values
+# -- cells -----------------------------------------------------------------------------------------------------------
 
 
-# -- times -----------------------------------------------------------------------------------------------------------
-
-
-def _times(columns: list, spec: Delimited, text: Text, where: str) -> np.ndarray:
-    """Turn the time columns into instants."""
-    name = " ".join(spec.time.columns)
-    parts = [_stripped(column) for column in columns]
-    cells = parts[0] if len(parts) == 1 else pc.binary_join_element_wise(*parts, " ")
-    layout = spec.time.layout
-    if layout == "epoch_s":
-        return _epoch(cells, spec, text, where, name)
-    if layout == "iso":
-        fixed = None
-        for pattern in ("%Y-%m-%dT%H:%M:%S.%f", "%Y-%m-%d %H:%M:%S.%f", "%Y-%m-%dT%H:%M:%S", "%Y-%m-%d %H:%M:%S"):
-            fixed = fixed if fixed is not None else _fixed_width(cells, pattern)
-        if fixed is not None:
-            return fixed
-        parse = parse_time
-    else:
-        fixed = _fixed_width(cells, layout)
-        if fixed is not None:
-            return fixed
+def _split_all(text: Text, needed: list[str], columns: dict, spec: Delimited, where: str) -> pa.Table:
+    """Split all records; numbers become float64 where all cells of a column are plain ones, and stay text elsewhere."""
+    first = split(bytes(text.data[: LONGEST_ROW + 2]).split(b"\n")[0].decode("utf-8"), spec)
+    if len(first) != len(text.names):
+        _tell_rows(text, spec, where)
+    kinds = {name: pa.string() for name in needed}
+    for quantity, name in columns.items():
+        plain = quantity not in ANGLES or re.fullmatch(r"[-+.,0-9eE]*", first[text.names.index(name)])
+        if name not in spec.time.columns and plain:
+            kinds[name] = pa.float64()
+    if spec.time.layout == "epoch_s":
+        kinds[spec.time.columns[0]] = pa.float64()
+    all_text = dict.fromkeys(needed, pa.string())
+    for types in (kinds, all_text):
         try:
-            return pd.to_datetime(cells.to_pandas(), format=layout).to_numpy().astype("datetime64[ns]")
-        except (ValueError, TypeError):
-            pass
-        parse = _strptime(layout)
-    try:
-        return np.array([parse(cell) for cell in cells.to_pylist()], "datetime64[ns]")
-    except ValueError:
-        must = "must be a time" if layout == "iso" else f"must be a time laid out as {layout}"
-        _tell(cells, parse, text, where, name, must)
-        raise
+            table = csv.read_csv(
+                pa.BufferReader(text.data),
+                read_options=csv.ReadOptions(
+                    column_names=[str(k) for k in range(len(text.names))], block_size=BLOCK_BYTES
+                ),
+                parse_options=csv.ParseOptions(
+                    delimiter=_delimiter(spec), quote_char='"' if text.quoted else False, ignore_empty_lines=False
+                ),
+                convert_options=csv.ConvertOptions(
+                    column_types={str(text.names.index(name)): kind for name, kind in types.items()},
+                    include_columns=[str(text.names.index(name)) for name in needed],
+                    null_values=[word.strip() for word in spec.missing],
+                    decimal_point=spec.decimal,
+                    check_utf8=False,
+                ),
+            )
+        except pa.ArrowInvalid:
+            _tell_rows(text, spec, where)
+            continue
+        if table.num_rows != len(text.rows):
+            break
+        if types is all_text or not any(_infinite(column) for column in table.columns):
+            return table.rename_columns(needed)
+    raise SurveyError(mistake(where, "must be rows of delimited text", "quotes or line ends that cannot be told apart"))
 
 
-def _epoch(cells, spec, text, where, name) -> np.ndarray:
-    """Turn seconds since 1970 into instants, to the microsecond."""
-    if spec.decimal == ",":
-        cells = pc.replace_substring(cells, ",", ".")
-    try:
-        seconds = pc.cast(cells, pa.float64()).to_numpy(zero_copy_only=False)
-    except pa.ArrowInvalid:
-        _tell(cells, float, text, where, name, "must be seconds since 1970")
-        raise
-    odd = ~(np.abs(seconds) < 9e9)
-    if odd.any():
-        k = int(np.flatnonzero(odd)[0])
-        must = "must be seconds since 1970, not milliseconds"
-        raise SurveyError(mistake(f"{where} row {text.rows[k]}, {name}", must, cells[k].as_py()))
-    return (np.rint(seconds * 1e6).astype(np.int64) * 1000).astype("datetime64[ns]")
+def _infinite(column: pa.ChunkedArray) -> bool:
+    """Tell whether a column of numbers holds any that is not finite: as text it is seen what it was."""
+    if not pa.types.is_floating(column.type):
+        return False
+    return np.count_nonzero(np.isfinite(column.to_numpy())) < len(column) - column.null_count
 
 
-def _strptime(layout: str):
-    """Return a parser of one cell that also knows 24:00:00 and the leap second 23:59:60."""
-    from datetime import datetime, timedelta
-
-    def parse(cell: str) -> np.datetime64:
-        add = timedelta()
-        for odd, plain in (("23:59:60", "23:59:59"), ("24:00:00", "23:59:59")):
-            if odd in cell:
-                cell, add = cell.replace(odd, plain), timedelta(seconds=1)
-        return np.datetime64(datetime.strptime(cell, layout) + add, "ns")
-
-    return parse
+def _has_quotes(data: bytes, delimiter: str) -> bool:
+    """Tell whether any cell begins with a quote; quotes elsewhere are characters like others."""
+    return b'"' in data and bool(re.search(b"(?:^|[\\n\\r]|" + re.escape(delimiter.encode()) + b')"', data))
 
 
-_WIDTHS = {"Y": 4, "m": 2, "d": 2, "H": 2, "M": 2, "S": 2, "j": 3, "y": 2}
-
-
-def _fixed_width(cells: pa.Array, layout: str) -> np.ndarray | None:
-    """Read times whose cells all have one width by position; None where that cannot be done or something is odd."""
-    if cells.null_count or len(cells) == 0:
-        return None
-    lengths = pc.binary_length(cells)
-    span = pc.min_max(lengths).as_py()
-    if span["min"] != span["max"]:
-        return None
-    width = span["max"]
-    offsets = np.frombuffer(cells.buffers()[1], np.int32, len(cells) + 1, cells.offset * 4)
-    matrix = np.frombuffer(cells.buffers()[2], np.uint8)[offsets[0] : offsets[-1]].reshape(len(cells), width)
-    values, at, k = {}, 0, 0
-    while k < len(layout):
-        if layout[k] == "%" and k + 1 < len(layout):
-            code = layout[k + 1]
-            size = width - at if code == "f" and k + 2 == len(layout) else _WIDTHS.get(code)
-            if size is None or at + size > width or size == 0 or size > 9:
-                return None
-            digits = matrix[:, at : at + size] - np.uint8(48)
-            if (digits > 9).any():
-                return None
-            number = np.zeros(len(cells), np.int64)
-            for column in range(size):
-                number = number * 10 + digits[:, column]
-            values[code] = number * 10 ** (9 - size) if code == "f" else number
-            at, k = at + size, k + 2
-        else:
-            if at >= width or (matrix[:, at] != ord(layout[k])).any():
-                return None
-            at, k = at + 1, k + 1
-    if at != width:
-        return None
-    return _assemble(values)
-
-
-def _assemble(values: dict[str, np.ndarray]) -> np.ndarray | None:
-    """Make instants of the parts of dates and times; None where a part is out of its range."""
-    if "y" in values and "Y" not in values:
-        values["Y"] = np.where(values["y"] < 69, 2000, 1900) + values["y"]  # as strptime does
-    if "Y" not in values or not ({"m", "d"} <= set(values) or "j" in values):
-        return None
-    zero = np.zeros(len(values["Y"]), np.int64)
-    hour, minute, second = (values.get(part, zero) for part in ("H", "M", "S"))
-    if (hour > 23).any() or (minute > 59).any() or (second > 59).any():
-        return None
-    year = (values["Y"] - 1970).astype("datetime64[Y]")
-    if "j" in values:
-        day = year.astype("datetime64[D]") + (values["j"] - 1).astype("timedelta64[D]")
-        if (values["j"] < 1).any() or (day.astype("datetime64[Y]") != year).any():
-            return None
+def _tell_rows(text: Text, spec: Delimited, where: str) -> None:
+    """Raise the sentences for rows with too many or too few cells, if there are any."""
+    lines = bytes(text.data).split(b"\n")[: len(text.rows)]
+    wanted = len(text.names)
+    if text.quoted:
+        numbers = np.array([len(split(line.decode("utf-8"), spec)) for line in lines])
+        open_quote = np.array([line.count(b'"') % 2 == 1 for line in lines])
     else:
-        month = year.astype("datetime64[M]") + (values["m"] - 1).astype("timedelta64[M]")
-        day = month.astype("datetime64[D]") + (values["d"] - 1).astype("timedelta64[D]")
-        if (values["m"] < 1).any() or (values["m"] > 12).any() or (values["d"] < 1).any():
-            return None
-        if (day.astype("datetime64[M]") != month).any():
-            return None
-    ns = ((hour * 60 + minute) * 60 + second) * 1_000_000_000 + values.get("f", zero)
-    return day.astype("datetime64[ns]") + ns.astype("timedelta64[ns]")
+        numbers = np.array([line.count(_delimiter(spec).encode()) + 1 for line in lines])
+        open_quote = np.zeros(len(lines), bool)
+    bad = np.flatnonzero((numbers != wanted) | open_quote)
+    wrong = []
+    for k in bad[:MOST_MISTAKES].tolist():
+        place = f"{where} row {text.rows[k]}"
+        if open_quote[k]:
+            wrong.append(mistake(place, "must close its quotes", lines[k].decode("utf-8")))
+        else:
+            wrong.append(mistake(place, f"must have {wanted} cells", int(numbers[k])))
+    if len(bad) > MOST_MISTAKES:
+        wrong.append(f"{where}: and {len(bad) - MOST_MISTAKES} more rows.")
+    if wrong:
+        raise SurveyError(*wrong)
+
+
+def _trimmed(column: pa.ChunkedArray) -> pa.Array:
+    return pc.utf8_trim_whitespace(column.combine_chunks())
+
+
+def _absent(cells: pa.Array, spec: Delimited) -> np.ndarray:
+    """Tell which cells of text are a code for no value."""
+    words = pa.array([word.strip() for word in spec.missing], pa.string())
+    return pc.is_in(cells, words).to_numpy(zero_copy_only=False)
+
+
+def _numbers(column: pa.ChunkedArray, spec: Delimited, place: Place) -> np.ndarray:
+    """Return a column of numbers; codes for no value become NaN."""
+    if pa.types.is_floating(column.type):
+        values = column.to_numpy()
+    else:
+        cells = _trimmed(column)
+        absent = _absent(cells, spec)
+        plain = pc.replace_substring(cells, ",", ".") if spec.decimal == "," else cells
+        proper = pc.match_substring_regex(plain, NUMBER).to_numpy(zero_copy_only=False)
+        if spec.decimal == ",":
+            proper = proper & ~pc.match_substring(cells, ".").to_numpy(zero_copy_only=False)
+        place.tell(~proper & ~absent, cells, f"must be a finite number with a decimal {MARKS[spec.decimal]}", NO_VALUE)
+        usable = proper & ~absent
+        values = np.full(len(cells), np.nan)
+        values[usable] = np.array(plain.filter(pa.array(usable)).to_pylist(), dtype=np.float64)
+        place.tell(usable & ~np.isfinite(values), cells, "must be a finite number")
+    return _without_codes(values, spec)
+
+
+def _without_codes(values: np.ndarray, spec: Delimited) -> np.ndarray:
+    """Make NaN of numbers that stand for no value, however they are written."""
+    codes = [float(word) for word in map(str.strip, spec.missing) if re.fullmatch(NUMBER, word)]
+    return np.where(np.isin(values, codes), np.nan, values) if codes else values
+
+
+def _angles(column: pa.ChunkedArray, spec: Delimited, place: Place, quantity: str) -> np.ndarray:
+    """Return latitudes or longitudes in degrees."""
+    sides = ANGLES[quantity]
+    lettered: np.ndarray | bool = False
+    if pa.types.is_floating(column.type):
+        cells, values = column, _numbers(column, spec, place)
+    else:
+        cells = _trimmed(column)
+        absent = _absent(cells, spec)
+        values, lettered, proper = _sexagesimal(cells, spec.decimal, sides)
+        if not proper.all():
+            must = f"must be degrees such as {'51.5042' if sides == 'NS' else '-17.5042'} or 51 30.25 {sides[0]}"
+            place.tell(~proper & ~absent, cells, must)
+        values = _without_codes(np.where(absent, np.nan, values), spec)
+    if quantity == "latitude_deg":
+        remedy = "Are latitude and longitude swapped, or degrees and minutes written together?"
+        place.tell(np.abs(values) > 90.0, cells, "must be between -90 and 90 degrees", remedy)
+        return values
+    bad = (values < -180.0) | (values > np.where(lettered, 180.0, 360.0))
+    place.tell(bad, cells, "must be between -180 and 360 degrees, with a letter up to 180")
+    return (values + 180.0) % 360.0 - 180.0
+
+
+def _sexagesimal(cells: pa.Array, decimal: str, sides: str) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """Read degrees, minutes and seconds with a letter or a sign: values, whether with a letter, whether well formed."""
+    text = pc.utf8_upper(pc.replace_substring(cells, ",", ".") if decimal == "," else cells)
+    fraction = r"[0-9]+(?:\.[0-9]*)?"
+    pattern = (
+        rf"^(?P<a>[{sides}]?)\s*(?P<sign>[-+]?)(?P<d>{fraction})(?:\s*[°ºD:\s]\s*(?P<m>{fraction})"
+        rf"(?:\s*['’′:\s]\s*(?P<s>{fraction}))?)?\s*[°º'’′\"”″]*\s*(?P<b>[{sides}]?)$"
+    )
+    parts = pc.extract_regex(text, pattern)
+    proper = parts.is_valid().to_numpy(zero_copy_only=False)
+
+    def part(name: str) -> pa.Array:
+        return pc.fill_null(pc.struct_field(parts, name), "")
+
+    def number(name: str) -> np.ndarray:
+        return pc.cast(pc.if_else(pc.equal(part(name), ""), "0", part(name)), pa.float64()).to_numpy()
+
+    def has(name: str, what: str | None = None) -> np.ndarray:
+        found = pc.not_equal(part(name), "") if what is None else pc.match_substring(part(name), what)
+        return found.to_numpy(zero_copy_only=False)
+
+    degrees, minutes, seconds = number("d"), number("m"), number("s")
+    letter = has("a") | has("b")
+    proper &= (minutes < 60) & (seconds < 60) & ~(has("a") & has("b")) & ~(letter & has("sign"))
+    proper &= ~(has("m") & has("d", ".")) & ~(has("s") & has("m", "."))  # no fraction but in the last part
+    negative = has("a", sides[1]) | has("b", sides[1]) | has("sign", "-")
+    values = (degrees + minutes / 60 + seconds / 3600) * np.where(negative, -1.0, 1.0)
+    return np.where(proper, values, np.nan), letter, proper
+
+
+def _times(table: pa.Table, spec: Delimited, place: Place) -> tuple[np.ndarray, np.ndarray]:
+    """Return the instants of all records, and which of them have none but a code for no value."""
+    columns = [table[name] for name in spec.time.columns]
+    if spec.time.layout == "epoch_s":
+        return _epoch(columns[0], spec, place)
+    ns, good = np.zeros(table.num_rows, np.int64), np.zeros(table.num_rows, bool)
+    at = 0
+    for batch in table.select(spec.time.columns).to_batches():
+        here = slice(at, at + batch.num_rows)
+        cells = batch.columns
+        if any(len(column) and column[0].as_py() != column[0].as_py().strip() for column in cells):
+            cells = [pc.utf8_trim_whitespace(column) for column in cells]
+        ns[here], good[here] = timestamps.parse(cells, spec.time.layout)
+        at += batch.num_rows
+    absent = np.zeros(len(good), bool)
+    if not good.all():
+        bad = np.flatnonzero(~good)
+        cells = [pc.utf8_trim_whitespace(column.take(pa.array(bad)).combine_chunks()) for column in columns]
+        ns[bad], good[bad] = timestamps.parse(cells, spec.time.layout)
+        absent[bad] = ~good[bad] & np.logical_and.reduce([_absent(column, spec) for column in cells])
+        joined = pc.binary_join_element_wise(*(_trimmed(column) for column in columns), " ")
+        must = f"must be a time such as {timestamps.example(spec.time.layout)}"
+        if spec.time.layout != "iso":
+            must += f" ({spec.time.layout})"
+        place.tell(~good & ~absent, joined, must)
+    return ns.astype("datetime64[ns]"), absent
+
+
+def _epoch(column: pa.ChunkedArray, spec: Delimited, place: Place) -> tuple[np.ndarray, np.ndarray]:
+    """Return instants of seconds since 1970, to the microsecond, which is what float64 resolves."""
+    seconds = _numbers(column, spec, place)
+    absent = np.isnan(seconds)
+    bad = ~absent & (np.abs(seconds) > EPOCH_LIMIT_S)
+    place.tell(bad, column, "must be seconds since 1970, not milliseconds or seconds of the day")
+    whole = np.where(absent | bad, 0.0, seconds)
+    return (np.rint(whole * 1e6).astype(np.int64) * 1000).astype("datetime64[ns]"), absent
