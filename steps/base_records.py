@@ -154,11 +154,10 @@ def _notes(name: str, ledger: dict[str, int], heads: list) -> list[str]:
     """Say what deserves a look in one station's files."""
     notes = []
     if ledger["out_of_range"]:
-        notes.append(f"base station {name}: {ledger['out_of_range']} values are no total field, and left out.")
+        notes.append(f"base station {name}: values left out that are no total field: {ledger['out_of_range']}.")
     if ledger["contradictory"]:
-        notes.append(
-            f"base station {name}: {ledger['contradictory']} values contradict another of that time: left out."
-        )
+        number = ledger["contradictory"]
+        notes.append(f"base station {name}: values left out that contradict another of the same time: {number}.")
     vectors = sorted({header.total_field_from for _, header in heads} - {"F", "S"})
     if vectors:
         notes.append(f"base station {name}: its total field is computed from {' and from '.join(vectors)}.")

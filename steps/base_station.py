@@ -1,10 +1,11 @@
 """Turn a base station's record of the total field into its variation: main field and datum taken off, gaps told.
 
 Taking the main field off keeps secular variation from becoming a trend. Noise is taken out by straight lines fitted
-with Gaussian weights, which has no phase and allows for gaps; the slow part, which follows local solar time, is a
-parabola fitted in the same way (locally weighted regression; Cleveland 1979, J. Am. Stat. Assoc. 74), whose response
-to a period T is ``(1 + u) exp(-u)`` with ``u = 2 (pi sigma / T)^2``: 0.97 at 12 hours and 0.05 at 3 hours for the usual
-5 hours. Three-hour ranges are those of Bartels, Heck & Johnston (1939), Terrestrial Magnetism 44, of the total field.
+with Gaussian weights, which has no phase and allows for gaps. The slow part, which follows local solar time, is a
+parabola fitted in the same way, whose response to a period T is ``(1 + u) exp(-u)`` with ``u = 2 (pi sigma / T)^2``:
+0.97 at 12 hours and 0.05 at 3 hours for the usual 5 hours; bays and storms, which do not follow local time, are weighed
+out of it (robust locally weighted regression; Cleveland 1979, J. Am. Stat. Assoc. 74). Three-hour ranges are those of
+Bartels, Heck & Johnston (1939), Terrestrial Magnetism 44, of the total field.
 """
 
 from dataclasses import dataclass, field, replace
@@ -24,6 +25,7 @@ HALF_OF_PARABOLA = np.sqrt(2 * 1.678347) / (2 * np.pi)
 CLOCKS_PER_LOW_PASS = 12
 COARSE_S = 60.0
 SHORTEST_NIGHT_S = 3600.0
+ROUNDS = 4  # of robust reweighting
 COMMON_S = 300.0  # clock on which stations are compared
 SHORTEST_COMMON_S = 3600.0
 LAGS_S = (60.0, 120.0, 300.0, 600.0, 900.0, 1800.0, 3600.0, 7200.0)
@@ -105,7 +107,9 @@ class Station:
 # -- smoothing and gaps ----------------------------------------------------------------------------------------------
 
 
-def local_fit(values: np.ndarray, sigma: float, degree: int, least: float = 0.0) -> np.ndarray:
+def local_fit(
+    values: np.ndarray, sigma: float, degree: int, least: float = 0.0, weight: np.ndarray | None = None
+) -> np.ndarray:
     """Smooth even samples by polynomials fitted with Gaussian weights; gaps and ends are allowed for.
 
     Parameters
@@ -117,6 +121,8 @@ def local_fit(values: np.ndarray, sigma: float, degree: int, least: float = 0.0)
     degree : {1, 2}
     least : float
         Share of the weights that must fall on values; below it the result is missing.
+    weight : array of float, shape (n,), optional
+        Further weights of the values; 1 by default.
 
     Returns
     -------
@@ -131,7 +137,8 @@ def local_fit(values: np.ndarray, sigma: float, degree: int, least: float = 0.0)
     kernel /= kernel.sum()
     good = np.isfinite(values)
     level = np.median(values[good]) if good.any() else 0.0
-    weight, centred = good.astype(float), np.where(good, values - level, 0.0)
+    weight = good * (1.0 if weight is None else weight)
+    centred = weight * np.where(good, values - level, 0.0)
 
     def moment(series, power):
         # sum over k of kernel(k - i) (k - i)^power series(k): a correlation, hence the flipped kernel
@@ -319,13 +326,24 @@ def _coarse_parts(departure: Series, settings: Diurnal) -> tuple[Series, Series,
     step = departure.step_s * many
     coarse = Series(departure.start_s + (many - 1) / 2 * departure.step_s, step, value)
     # up to one sigma outside the record a parabola may be trusted
-    slow = local_fit(value, HALF_OF_PARABOLA * settings.slow_period_h * 3600 / step, 2, least=0.16)
+    slow = _robust_slow(value, HALF_OF_PARABOLA * settings.slow_period_h * 3600 / step, settings.disturbed_nt)
     told = np.flatnonzero(np.isfinite(slow))
     if len(told) == 0:
         told, slow = np.zeros(1, int), np.full(len(slow), np.nanmean(value))
     slow = np.interp(np.arange(len(slow)), told, slow[told])
     disturbed = find_disturbed(value, round(chord_s / step), settings.disturbed_nt)
     return coarse, replace(coarse, value=slow), disturbed
+
+
+def _robust_slow(value: np.ndarray, sigma: float, disturbed_nt: float) -> np.ndarray:
+    """Fit the slow part so that bays and storms, which do not follow local time, stay out of it (bisquare weights)."""
+    weight = np.ones(len(value))
+    for _ in range(ROUNDS + 1):
+        slow = local_fit(value, sigma, 2, least=0.16, weight=weight)
+        off = np.abs(value - slow)
+        wide = max(6 * np.nanmedian(off), 2 * disturbed_nt) if np.isfinite(off).any() else np.inf
+        weight = np.where(off < wide, (1 - (off / wide) ** 2) ** 2, 0.0)
+    return slow
 
 
 def _runs(good: np.ndarray) -> np.ndarray:

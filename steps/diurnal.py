@@ -2,7 +2,7 @@
 
 The regular daily variation follows local solar time, storms and bays follow universal time: so the slow part of a
 station's variation is shifted by the difference of longitude (15 degrees an hour) and the fast part is not (Riddihough
-1971, Geophysical Prospecting 19; `steps.base_station` makes the parts). Where the shift asks for a time that the record
+1971, Geophysical Prospecting 19; `steps.base_station` parts them). Where the shift asks for a time that the record
 does not hold, the slow part is taken to stay as it was at the record's edge, and sigma grows by how much it changes in
 such a time elsewhere in the record.
 
@@ -200,7 +200,7 @@ def _weights(away, fade, lat, lon, stations, settings) -> np.ndarray:
         weight = np.empty_like(fade)
         np.put_along_axis(weight, order, sorted_fade * left, axis=0)
         return weight
-    if settings.combine == "distance" or len(stations) < 3:
+    if settings.combine == "distance":
         return fade / (away**2 + NEAREST_KM**2)
     # A plane through the stations, in tangent coordinates at the ship: its value at the ship is a weighted sum of
     # theirs. A gradient of the size that the law of error expects is the prior, so that two stations, or three in a
