@@ -53,6 +53,10 @@ def each(name):
     return expand("reduced/{survey}/" + name, survey=SURVEYS)
 
 
+onsuccess:
+    print("\n".join(survey.closing_lines()))
+
+
 wildcard_constraints:
     survey="[a-z0-9_-]+",
 

@@ -326,10 +326,7 @@ def main(job: stage.Job) -> None:
             print(f"against the run before: {'; '.join(what)}")
     job.done(f"mismatch of the crossings used, rms: {told}")
     first = [f"{name}: {sentence}" for name, sentence in sorted(content["notes"], key=_weight)][:3]
-    job.closing = [
-        "Results are in reduced/; open reduced/report.html.",
-        *(["Deserves a look first:", *(f"  {sentence}" for sentence in first)] if first else []),
-    ]
+    job.record["look_first"] = first
 
 
 def _weight(note: tuple[str, str]) -> int:

@@ -58,7 +58,6 @@ class Job:
             self._outputs[path.stem] = self._outputs[path.name] = path
             self._outputs[f"{path.parent.name}/{path.stem}"] = path
         self._finals = list(outputs)
-        self.closing: list[str] = []  # lines printed after the stage's own
         self._ready: list[tuple[Path, Path]] = []
         self._start = time.monotonic()
         for final in outputs:  # what a killed run left half written
@@ -134,8 +133,6 @@ class Job:
         print(
             f"{self.name:<11} {who + ': ' if who else ''}{self.record.get('done', 'done')} "
             f"({time.monotonic() - self._start:.1f} s)",
-            *self.closing,
-            sep="\n",
             flush=True,
         )
 

@@ -4,6 +4,7 @@ The Snakefile calls `load` before any work and asks the result which files and o
 """
 
 import difflib
+import json
 import re
 import shlex
 import unicodedata
@@ -259,6 +260,14 @@ def _matches(folder: Path, pattern: str, folders: bool = False) -> list[str]:
     exact = folder / pattern  # a name may itself hold pattern characters
     found = [exact] if exact.exists() else sorted(folder.glob(pattern))
     return [path.relative_to(folder).as_posix() for path in found if (path.is_dir() if folders else path.is_file())]
+
+
+def closing_lines() -> list[str]:
+    """Return what a run ends with: where the results are, and what deserves a look first."""
+    record = json.loads(Path("reduced/report_record.json").read_text(encoding="utf-8"))
+    first = [f"  {sentence}" for sentence in record["look_first"]]
+    lines = [f"Results: {Path('reduced').resolve()}", f"Open {Path('reduced', 'report.html').resolve()}"]
+    return [*lines, *(["Deserves a look first:", *first] if first else [])]
 
 
 # -- the settings file -----------------------------------------------------------------------------------------------
