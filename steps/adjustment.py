@@ -20,7 +20,8 @@ MAD_TO_SIGMA = 1.4826
 INVERTED = 10_000  # unknowns up to which the whole covariance is worked out
 FACTORED = 2500  # unknowns up to which the preconditioner is the factor of the whole normal matrix
 TOLERANCE = 1e-8  # of the conjugate gradients
-DRAWS = 32
+DRAWS, DRAWN = 32, 1e-4  # draws from the posterior, and their tolerance: their number limits them far more
+ABREAST = 8  # draws that are worked on at once
 NARROW = 8  # rows of a block up to which A L is formed
 CHUNK = 1 << 18  # crossings handled at once where memory counts
 
@@ -249,9 +250,14 @@ class _System:
         return v
 
     def normal(self, x, precision):
-        """Return the product of the normal matrix with x."""
-        scaled = precision[:, None] if x.ndim > 1 else precision
-        return x + self.back(scaled * self.forward(x))
+        """Return the product of the normal matrix with x, shape (r,) or (r, k)."""
+        if x.ndim == 1:
+            return x + self.back(precision * self.forward(x))
+        found = np.empty_like(x)
+        for first in range(0, x.shape[1], ABREAST):  # as many as memory is not missed for
+            some = np.ascontiguousarray(x[:, first : first + ABREAST])
+            found[:, first : first + ABREAST] = some + self.back(precision[:, None] * self.forward(some))
+        return found
 
     def solve(self, mismatch, precision, start):
         """Solve for one vector of mismatches."""
@@ -304,31 +310,29 @@ class _System:
             number[members] = np.arange(len(members))
         of_column = np.repeat(np.arange(len(self._sizes)), self._sizes)
         matrices = {s: np.tile(np.eye(s), (len(members), 1, 1)) for s, members in stacks.items()}
-        if self.whole is not None:
-            for first in range(0, self.whole.shape[0], CHUNK):
-                rows = self.whole[first : first + CHUNK]
-                own = rows.multiply(np.sqrt(precision[first : first + CHUNK])[:, None]).tocsr()
-                self._add_blocks(matrices, csr_array(own.T @ own).tocoo(), of_column, number, position)
-        else:  # within a block L, A'WA within its rows
-            own = self._design.multiply(np.sqrt(precision)[:, None]).tocsr()
-            nodes = csr_array(own.T @ own)
-            block_of_row = self._block_of_row()
-            inner = nodes.tocoo()
-            same = block_of_row[inner.row] == block_of_row[inner.col]
-            inner = csr_array((inner.data[same], (inner.row[same], inner.col[same])), shape=nodes.shape)
-            product = csr_array(self._root.T @ csr_array(inner @ self._root)).tocoo()
-            self._add_blocks(matrices, product, of_column, number, position)
-        return {s: (members, matrices[s]) for s, members in stacks.items()}
-
-    def _add_blocks(self, matrices, product, of_column, number, position):
+        matrix = self._design if self.whole is None else self.whole
+        block = self._block_of_row() if self.whole is None else of_column
+        product = 0
+        for first in range(0, matrix.shape[0], CHUNK):
+            rows = matrix[first : first + CHUNK]
+            scaled = rows.multiply(np.sqrt(precision[first : first + CHUNK])[:, None]).tocoo()
+            # a crossing of two blocks as two rows, so that only what lies within a block is multiplied
+            pair = scaled.row.astype(np.int64) * (len(self._sizes) + 1) + block[scaled.col] + 1
+            row = np.unique(pair, return_inverse=True)[1]
+            apart = csr_array((scaled.data, (row, scaled.col)), shape=(int(row.max(initial=-1)) + 1, matrix.shape[1]))
+            product = product + csr_array(apart.T @ apart)
+        if self.whole is None:
+            product = csr_array(self._root.T @ csr_array(product @ self._root))
+        product = product.tocoo()
         same = of_column[product.row] == of_column[product.col]
         row, column, value = product.row[same], product.col[same], product.data[same]
         size = self._sizes[of_column[row]]
         for s, stack in matrices.items():
             mine = size == s
             np.add.at(stack, (number[of_column[row[mine]]], position[row[mine]], position[column[mine]]), value[mine])
+        return {s: (members, matrices[s]) for s, members in stacks.items()}
 
-    def _conjugate_gradients(self, right, precision, x):
+    def _conjugate_gradients(self, right, precision, x, tolerance=TOLERANCE):
         """Solve by preconditioned conjugate gradients, several right-hand sides side by side."""
         if self._preconditioner is None:  # weights change little from iteration to iteration: made once
             if self._size <= FACTORED:
@@ -337,7 +341,7 @@ class _System:
                 blocks = self._block_matrices(precision)
                 self._preconditioner = {s: (members, np.linalg.inv(stack)) for s, (members, stack) in blocks.items()}
         residual = right - self.normal(x, precision)
-        limit = TOLERANCE * np.sqrt(np.sum(right * self._precondition(right), axis=0))
+        limit = tolerance * np.sqrt(np.sum(right * self._precondition(right), axis=0))
         z = self._precondition(residual)
         direction, energy = z, np.sum(residual * z, axis=0)
         for _ in range(2000):
@@ -372,13 +376,13 @@ class _System:
     def sample(self, precision):
         """Draw from the posterior; return blocks, draws and means as `Solution` has them, and ``a L C L'a'``."""
         rng = np.random.default_rng(20)
-        noise = rng.standard_normal((len(precision), DRAWS)) * np.sqrt(precision)[:, None]
-        right = self.back(noise) + rng.standard_normal((self._size, DRAWS))
-        del noise
+        right = rng.standard_normal((self._size, DRAWS))
+        for k in range(DRAWS):
+            right[:, k] += self.back(np.sqrt(precision) * rng.standard_normal(len(precision)))
         stacks = self._block_matrices(precision)
         exact = {s: (members, np.linalg.inv(stack)) for s, (members, stack) in stacks.items()}
         self._preconditioner = exact
-        draws = self._conjugate_gradients(right, precision, np.zeros_like(right))
+        draws = self._conjugate_gradients(right, precision, np.zeros_like(right), tolerance=DRAWN)
         change = -self._by_block(self.normal(draws, precision), exact)  # from a draw to the mean given all other blocks
         blocks = {}
         for members, matrices in exact.values():

@@ -24,6 +24,7 @@ EFFECTS_OF = {
     "clock": slice(6, 7),
 }
 NOISE = ("noise", "position", "extra")  # parts of a crossing's own variance
+ROUNDING = 1e-12  # of the largest variance, added to all: where signal outweighs noise by more, digits run out
 FLOOR = 1e-6  # weight of a rejected crossing in V: none, but its prediction stays defined
 
 
@@ -249,7 +250,8 @@ class Block:
         total = self.fixed(model.prior)
         for process, size in zip(model.processes, np.exp(model.log_variance), strict=False):
             total += size * self._of[process]
-        total[np.diag_indices_from(total)] += model.noise(self.crossings.parts) / np.maximum(weight, FLOOR)
+        own = ROUNDING * np.max(np.diag(total), initial=0.0) + model.noise(self.crossings.parts)
+        total[np.diag_indices_from(total)] += own / np.maximum(weight, FLOOR)
         return total
 
 
@@ -282,6 +284,7 @@ def _likelihood(model: Model, fixed: list, shapes: list, mismatches: list, log_v
         for size, shape in zip(sizes[:m], own[:m], strict=True):
             v += size * shape
         v[np.diag_indices_from(v)] += sum(size * shape for size, shape in zip(sizes[m:], own[m:], strict=True))
+        v[np.diag_indices_from(v)] += ROUNDING * np.max(np.diag(v), initial=0.0)
         try:
             factor = np.linalg.cholesky(v)
         except np.linalg.LinAlgError:

@@ -417,7 +417,7 @@ def _about_survey(levels, s: int, settings) -> tuple[list[str], dict]:
     if "diurnal_scale" in kept:
         share = determined_share(prior, p.effects_covariance[s], "diurnal_scale")
         said["diurnal_scale"]["determined"] = share
-        scale, sigma = 1 + p.effects[s, 4], float(np.sqrt(p.effects_covariance[s, 4, 4]))
+        scale, sigma = 1 + p.effects[s, 4], float(np.sqrt(max(p.effects_covariance[s, 4, 4], 0.0)))
         if abs(scale - 1) > SIGNIFICANT * sigma:
             notes.append(f"the variation at the ship is {scale:.3f} (sigma {sigma:.3f}) of that at the base: applied.")
     if wanted & {"layback", "clock"}:
@@ -441,15 +441,12 @@ def _weak_modes(levels) -> dict | None:
     if not used.any():
         return None
     one, two = levels.data.first.take(used), levels.data.second.take(used)
-    table = levels.crossings
-    weight = table["weight"].to_numpy(float)
-    if "sensor_latitude_deg" not in table or not np.isfinite(table["sensor_latitude_deg"][weight > 0]).all():
-        return None
-    # the canonical order of crossings is that of time: put their places into it
-    lat, lon = (table[f"sensor_{name}_deg"].to_numpy(float) for name in ("latitude", "longitude"))
     rows = levels.order[used]
-    east = (lon[rows] - lon[rows][0] + 180.0) % 360.0 - 180.0
-    place = np.column_stack([east * np.cos(np.radians(lat[rows].mean())), lat[rows]])
+    lat, lon = (levels.crossings[f"sensor_{name}_deg"].to_numpy(float)[rows] for name in ("latitude", "longitude"))
+    if not np.isfinite(lat + lon).all():
+        return None
+    east = (lon - lon[0] + 180.0) % 360.0 - 180.0
+    place = np.column_stack([east * np.cos(np.radians(lat.mean())), lat])
     return weak_modes(one.line, two.line, np.column_stack([one.share, two.share]), place, len(levels.lines))
 
 
