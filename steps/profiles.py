@@ -19,6 +19,7 @@ the datum is common to a network of lines and stands apart.
 
 import hashlib
 import json
+from collections.abc import Mapping
 
 import numpy as np
 import pandas as pd
@@ -26,7 +27,7 @@ import pandas as pd
 from steps import __version__, edits, geodesy, main_field, projection, provenance, stage
 from steps.columns import REJECTING, TABLES, Flag
 from steps.formats.profile_csv import as_csv, file_names, one_line
-from steps.resampling import EvenSamples, even_samples
+from steps.resampling import even_samples
 from steps.screen import rejected
 from steps.settings import Profiles
 
@@ -40,6 +41,9 @@ TERMS = {
 REASONS = np.uint32(REJECTING | Flag.NO_NAVIGATION | Flag.NO_CABLE)  # why a sample may be missing
 APART = ("sigma_diurnal_nt", "sigma_heading_nt", "sigma_level_nt")
 SHARED = ("sigma_position_nt", *APART, "sigma_joint_nt", "sigma_datum_nt")  # errors that neighbours share
+RESAMPLED = ("total_field_nt", *TERMS, *SHARED, "offset_km", "sensor_depth_m", "water_depth_m")
+PLACED = ("time_utc", "distance_km", "sensor_latitude_deg", "sensor_longitude_deg", "flags")
+NEEDED = (*RESAMPLED, *PLACED, "sigma_noise_nt")  # columns that a profile is made of
 WIDEST_DEPARTURE_DEG = 45.0  # of a line from the stated azimuth
 FRAGILE_DEG = 10.0  # lines so near to right angles with the sense of distance may be turned either way
 SAID = (
@@ -96,12 +100,12 @@ def combine(parts: dict[str, pd.DataFrame]) -> tuple[pd.DataFrame, list[str]]:
     return table.assign(flags=flags, anomaly_nt=np.where(rejected(flags), np.nan, anomaly)), absent
 
 
-def total_sigma(table: pd.DataFrame) -> np.ndarray:
+def total_sigma(table: Mapping[str, np.ndarray] | pd.DataFrame) -> np.ndarray:
     """Return one sigma of the anomaly, datum left out.
 
     Parameters
     ----------
-    table : pandas.DataFrame
+    table : pandas.DataFrame or dict of str to array, shape (n,)
         anomaly_nt and the sigmas of noise, position, diurnal, heading and level, and of the last three jointly; NaN
         where there is none.
 
@@ -111,13 +115,12 @@ def total_sigma(table: pd.DataFrame) -> np.ndarray:
         nT; NaN where there is no anomaly.
 
     """
-    joint = table["sigma_joint_nt"].to_numpy(float)
-    apart = sum(np.nan_to_num(table[name].to_numpy(float)) ** 2 for name in APART)
+    joint, anomaly = np.asarray(table["sigma_joint_nt"], float), np.asarray(table["anomaly_nt"], float)
+    apart = sum(np.nan_to_num(np.asarray(table[name], float)) ** 2 for name in APART)
     squares = np.where(np.isfinite(joint), joint**2, apart)
-    squares = squares + sum(
-        np.nan_to_num(table[f"sigma_{name}_nt"].to_numpy(float)) ** 2 for name in ("noise", "position")
-    )
-    return np.where(np.isfinite(table["anomaly_nt"].to_numpy(float)), np.sqrt(squares), np.nan)
+    for name in ("sigma_noise_nt", "sigma_position_nt"):
+        squares = squares + np.nan_to_num(np.asarray(table[name], float)) ** 2
+    return np.where(np.isfinite(anomaly), np.sqrt(squares), np.nan)
 
 
 def along_track_gradient(path_m: np.ndarray, value: np.ndarray, window_m: float) -> np.ndarray:
@@ -221,12 +224,14 @@ def azimuth_along(frame: dict, distance_km: np.ndarray) -> np.ndarray:
 # -- samples ---------------------------------------------------------------------------------------------------------
 
 
-def make_profile(line: pd.DataFrame, frame: dict, settings: Profiles, absent: list[str]) -> pd.DataFrame:
+def make_profile(
+    line: Mapping[str, np.ndarray] | pd.DataFrame, frame: dict, settings: Profiles, absent: list[str]
+) -> pd.DataFrame:
     """Resample one line.
 
     Parameters
     ----------
-    line : pandas.DataFrame
+    line : pandas.DataFrame or dict of str to array, shape (n,)
         Its readings in order of time, with the columns of `combine`, and distance_km, offset_km, sigma_position_nt.
     frame : dict
         Of `place_line`.
@@ -240,53 +245,51 @@ def make_profile(line: pd.DataFrame, frame: dict, settings: Profiles, absent: li
         Table `profiles` without line and kind; empty without two kept readings.
 
     """
-    x = line["distance_km"].to_numpy(float)
-    usable = np.isfinite(x) & ~rejected(line["flags"].to_numpy()) & line["total_field_nt"].notna().to_numpy()
+    own = {name: np.asarray(line[name]) for name in NEEDED}
+    x, flags = own["distance_km"], own["flags"].astype(np.uint32)
+    usable = np.isfinite(x) & ~rejected(flags) & np.isfinite(own["total_field_nt"])
     names = [name for name in TABLES["profiles"] if name not in ("line", "kind")]
     if usable.sum() < 2:
         return pd.DataFrame({name: [] for name in names})
     steps = {"spacing_km": settings.spacing_km, "longest_gap_km": settings.longest_gap_km}
     span = (x[usable].min(), x[usable].max())
     whole = even_samples(x, usable, **steps, between_km=span)
-    time = line["time_utc"].to_numpy().astype("datetime64[ns]").astype(np.int64)
+    time = own["time_utc"].astype("datetime64[ns]").astype(np.int64)
     cell, inside = _cells(np.interp(time, time[np.isfinite(x)], x[np.isfinite(x)]), whole.at_km, settings.spacing_km)
-    known: dict[bytes, EvenSamples] = {usable.tobytes(): whole}
 
-    def samples(name: str, strict: bool = False) -> np.ndarray:
-        """Resample a column over the readings that have it; a strict one is missing beside any reading without."""
-        value = line[name].to_numpy(float)
-        there = usable & np.isfinite(value)
-        key = there.tobytes()
-        if key not in known:
-            known[key] = even_samples(x, there, **steps, between_km=span)
-        result = known[key].mean(value)
-        if strict:
-            result[cell[inside & usable & ~there]] = np.nan
-        return result
-
-    place = geodesy.to_vectors(line["sensor_latitude_deg"].to_numpy(), line["sensor_longitude_deg"].to_numpy())
-    lat, lon = geodesy.to_degrees(whole.mean(place.T).T)
-    seconds = np.nan_to_num(whole.mean((time - time[0]) / 1e9))
-    when = time[0] + np.rint(seconds * 1e9).astype(np.int64)
-    columns = {
+    # quantities that the same readings have are resampled together
+    place = geodesy.to_vectors(own["sensor_latitude_deg"], own["sensor_longitude_deg"])
+    own |= dict(zip("xyz", place, strict=True)) | {"seconds": (time - time[0]) / 1e9}
+    alike: dict[bytes, list[str]] = {}
+    for name in ("x", "y", "z", "seconds", *RESAMPLED):
+        alike.setdefault((usable & np.isfinite(own[name])).tobytes(), []).append(name)
+    columns = {}
+    for key, group in alike.items():
+        there = np.frombuffer(key, bool)
+        even = whole if (there == usable).all() else even_samples(x, there, **steps, between_km=span)
+        columns |= dict(zip(group, even.mean(np.column_stack([own[name] for name in group])).T, strict=True))
+        for name in group:  # no term is bridged over a reading that lacks it
+            if name in TERMS:
+                columns[name][cell[inside & usable & ~there]] = np.nan
+    lat, lon = geodesy.to_degrees(np.stack([columns.pop(axis) for axis in "xyz"]))
+    when = time[0] + np.rint(np.nan_to_num(columns.pop("seconds")) * 1e9).astype(np.int64)
+    anomaly = columns["total_field_nt"]
+    for term in TERMS:
+        if term not in absent and not (term == "level_nt" and np.isnan(own[term]).all()):
+            anomaly = anomaly - columns[term]
+    columns |= {
         "distance_km": whole.at_km,
         "azimuth_deg": azimuth_along(frame, whole.at_km),
         "time_utc": np.where(whole.present, when, np.iinfo(np.int64).min).astype("datetime64[ns]"),
         "sensor_latitude_deg": lat,
         "sensor_longitude_deg": lon,
-        "sigma_noise_nt": whole.noise(line["sigma_noise_nt"].to_numpy(float)),
-        **{name: samples(name) for name in ("offset_km", "sensor_depth_m", "water_depth_m")},
-        **{name: samples(name, strict=True) for name in ("total_field_nt", *TERMS)},
-        **{name: np.maximum(samples(name), 0.0) for name in SHARED},
+        "anomaly_nt": anomaly,
+        "sigma_noise_nt": whole.noise(own["sigma_noise_nt"]),
+        **{name: np.maximum(columns[name], 0.0) for name in SHARED},
+        "flags": _flags(flags, cell, inside, usable, whole.present),
     }
-    anomaly = columns["total_field_nt"]
-    for term in TERMS:
-        if term not in absent and not (term == "level_nt" and line[term].isna().all()):
-            anomaly = anomaly - columns[term]
-    table = pd.DataFrame({**columns, "anomaly_nt": anomaly})
-    columns["anomaly_nt"], columns["sigma_anomaly_nt"] = anomaly, total_sigma(table)
+    columns["sigma_anomaly_nt"] = total_sigma(columns)
     columns |= _ambient(columns)
-    columns["flags"] = _flags(line["flags"].to_numpy(), cell, inside, usable, whole.present)
     return pd.DataFrame({name: columns[name] for name in names})
 
 
@@ -426,13 +429,16 @@ def main(job: stage.Job) -> None:
     table, frames = project_lines(table, len(lines), wanted, own)
     table["sigma_anomaly_nt"] = total_sigma(table)
     rows = line_rows(table["line_index"].to_numpy(), len(lines))
+    columns = {name: table[name].to_numpy() for name in NEEDED}
     folder, files = job.target("csv"), file_names(lines["line"].tolist())
     parts, told = [], []
     for number in np.flatnonzero(wanted):
         line, kind = lines["line"].iloc[number], lines["kind"].iloc[number]
         if number not in frames:
             continue
-        profile = make_profile(table.iloc[rows[number]], frames[number], own, missing)
+        profile = make_profile(
+            {name: part[rows[number]] for name, part in columns.items()}, frames[number], own, missing
+        )
         if not profile["total_field_nt"].notna().any():
             continue
         told.append(_summary(line, kind, f"{files[number]}.csv", profile) | frames[number])

@@ -13,15 +13,15 @@ from steps.geodesy import A_M, B_M, E2
 
 NODES_KM = 10.0  # between nodes of the geodesic; a cubic between them is within a micrometre
 NEIGHBOURS_M = 1000.0  # of a position whose foot is found exactly
-ENOUGH = 4096  # positions that a fit looks at
-ROUNDS = 30
+ENOUGH = 1024  # positions that a fit looks at
+HUBER, ROUNDS = 8, 40  # rounds with Huber's weights, and with Tukey's until the direction turns no more
 
 
 def best_fit_azimuth(lat: np.ndarray, lon: np.ndarray) -> tuple[float, float, float]:
-    """Fit a geodesic to a track so that the mean distance from it is least, whatever turns and hooks the track has.
+    """Fit a geodesic to a track, whatever turns and hooks the track has at its ends.
 
-    Least absolute distances by iteratively reweighted least squares (e.g. Huber 1981, Robust Statistics) in the
-    gnomonic projection about the middle of the track, where geodesics are all but straight.
+    Orthogonal distances by iteratively reweighted least squares, with Huber's and then Tukey's weights (Huber 1981,
+    Robust Statistics), in the gnomonic projection about the middle of the track, where geodesics are all but straight.
 
     Parameters
     ----------
@@ -43,8 +43,8 @@ def best_fit_azimuth(lat: np.ndarray, lon: np.ndarray) -> tuple[float, float, fl
     """
     from pyproj import Geod
 
-    every = max(1, len(lat) // ENOUGH)
-    lat, lon = np.asarray(lat, float)[::every], np.asarray(lon, float)[::every]
+    some = np.unique(np.rint(np.linspace(0, len(lat) - 1, min(ENOUGH, len(lat)))).astype(np.int64))
+    lat, lon = np.asarray(lat, float)[some], np.asarray(lon, float)[some]
     lat_m, lon_m = middle(lat, lon)
     phi, phi_m, turn = np.radians(lat), np.radians(lat_m), np.radians(lon - lon_m)
     cosine = np.sin(phi_m) * np.sin(phi) + np.cos(phi_m) * np.cos(phi) * np.cos(turn)
@@ -53,15 +53,17 @@ def best_fit_azimuth(lat: np.ndarray, lon: np.ndarray) -> tuple[float, float, fl
     points = np.stack([x, y])
     if np.ptp(x) == 0 and np.ptp(y) == 0:
         raise ValueError("a track needs two different positions to have an azimuth")
-    weight = np.ones(len(x))
-    for _ in range(ROUNDS):
+    weight, along = np.ones(len(x)), np.zeros(2)
+    for number in range(ROUNDS):
         centre = points @ weight / weight.sum()
         off = points - centre[:, None]
-        _, axes = np.linalg.eigh((off * weight) @ off.T)
-        along = axes[:, 1]
+        along, last = np.linalg.eigh((off * weight) @ off.T)[1][:, 1], along
+        if number > HUBER and abs(last[0] * along[1] - last[1] * along[0]) < 1e-10:
+            break
         across = np.abs(along[0] * off[1] - along[1] * off[0])
-        weight = 1.0 / np.maximum(across, max(1e-3 * np.median(across), 1e-9))
-        weight /= weight.max()
+        scale = max(1.4826 * np.median(across), 1e-9)
+        huber = scale / np.maximum(across, scale)
+        weight = huber if number < HUBER else np.maximum(1 - (across / (4.685 * scale)) ** 2, 0.0) ** 2
     travelled = np.median(along @ points[:, len(x) // 2 :]) - np.median(along @ points[:, : len(x) // 2 + 1])
     along = along * (1.0 if travelled >= 0 else -1.0) * 1e-6  # 6 m
     ends = []
