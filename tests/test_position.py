@@ -9,6 +9,7 @@ from scipy.integrate import solve_ivp
 from steps import geodesy, position
 from steps.columns import Flag
 from steps.errors import SurveyError
+from steps.navigation import smooth
 from steps.settings import AntennaToTowPoint, Layback, Position
 
 GEOD = Geod(ellps="WGS84")  # Karney (2013), J. Geodesy 87
@@ -212,13 +213,13 @@ def test_impossible_fixes_are_gated(bad):
 
 
 def test_smoothing_keeps_a_turn_and_takes_the_jitter():
-    """With sigma 15 s a turn of 900 m radius at 5 m/s is narrowed by u^2 / 2 of its radius, u = (sigma w)^2 / 2: 5 mm."""
+    """A turn of 900 m radius at 5 m/s is narrowed by u^2 / 2 of its radius, u = (sigma w)^2 / 2: 5 mm at 15 s."""
     w, sigma = 5.0 / 900.0, 15.0
     t = np.arange(0, 2000.0)
     circle = 900.0 * np.stack([np.sin(w * t), np.cos(w * t)])
-    radius = np.hypot(*position.smooth(circle, sigma))[200:-200]
+    radius = np.hypot(*smooth(circle, sigma))[200:-200]
     assert 900.0 - radius.mean() == pytest.approx(900.0 * ((sigma * w) ** 2 / 2) ** 2 / 2, rel=0.05)
-    noise = position.smooth(RNG.normal(0, 1, (1, 200_000)), sigma)
+    noise = smooth(RNG.normal(0, 1, (1, 200_000)), sigma)
     assert noise.std() == pytest.approx(np.sqrt(0.476 / sigma), rel=0.03)
 
 
