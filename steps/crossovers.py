@@ -323,12 +323,11 @@ def main(job: stage.Job) -> None:
         link.append(np.append(joined(rows["time_utc"].to_numpy(), index, own.longest_gap_s), False)[: len(rows)])
         start.append(start[-1] + len(rows))
         lines += len(table)
-    del rows
-    found = find_crossings(
-        *(np.concatenate(part) for part in (lat, lon, track)),
-        joined=np.concatenate(link)[:-1],
-        shortest_loop_m=own.shortest_loop_km * 1000,
-    )
+    del rows, index
+    lat, lon, track = np.concatenate(lat), np.concatenate(lon), np.concatenate(track)  # the parts are let go
+    loop_m = own.shortest_loop_km * 1000
+    found = find_crossings(lat, lon, track, joined=np.concatenate(link)[:-1], shortest_loop_m=loop_m)
+    del lat, lon, track
     sides: tuple[dict, dict] = ({}, {})
     for number, table in enumerate(tables):
         places = [np.flatnonzero((k >= start[number]) & (k < start[number + 1])) for k in (found.i, found.j)]
