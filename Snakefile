@@ -335,8 +335,9 @@ rule report:  # all surveys together
             *each("profiles_record.json"),
         ],
     output:
-        "reduced/summary.txt",
-        "reduced/report.html",
+        # kept until the new ones are whole: Snakemake removes other outputs before a job
+        update("reduced/summary.txt"),
+        update("reduced/report.html"),
         directory("reduced/figures"),
         "reduced/report_record.json",
     log:

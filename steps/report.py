@@ -109,6 +109,35 @@ def line_rows(levels: pd.DataFrame, tables: dict[str, pd.DataFrame], corrected: 
     return rows
 
 
+def joint_rows(record: dict) -> tuple[list[dict], list[dict]]:
+    """Gather what the joint adjustment estimated, and what each of its terms brought.
+
+    Parameters
+    ----------
+    record : dict
+        Of levelling.
+
+    Returns
+    -------
+    terms : list of dict
+        term, kept, left-out rms with and without it, nT.
+    estimates : list of dict
+        survey, what, value, sigma, unit, applied: errors of layback and clock against the settings, and the scale on
+        the variation of the base stations.
+
+    """
+    known = {"layback": ("error of the layback", "m"), "clock": ("error of the clock", "s")}
+    known["diurnal_scale"] = ("departure from 1 of the scale on the base stations", "1")
+    estimates = [
+        {"survey": key, "what": what, "value": own["values"][0], "sigma": own["sigmas"][0], "unit": unit}
+        | {"applied": own["applied"]}
+        for key, terms in record.get("surveys", {}).items()
+        for name, (what, unit) in known.items()
+        if (own := terms.get(name)) and own.get("values")
+    ]
+    return record.get("terms", []), estimates
+
+
 def number(value: object, digits: int = 2) -> str:
     """Write a number for a person: fixed decimals, thin spaces between thousands, a dash for none."""
     if value is None or value != value:
@@ -310,6 +339,7 @@ def main(job: stage.Job) -> None:
             for place, record in ordered
         ],
     }
+    content["terms"], content["estimates"] = joint_rows(records["", "levelling"])
     state = run_state(content, records, found)
     last = history.keep(job.output("report.html").parent / "history", state, samples)
     changes = history.compare(last, state, samples) if last else None

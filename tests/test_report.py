@@ -179,6 +179,8 @@ def nasty_page(tmp_path):
         "files": [{"file": NASTY[0], "sha256": "0"}],
         "settings": [("screen", NASTY[0])],
         "figures": [],
+        "terms": [],
+        "estimates": [],
         "changes": None,
         "view": page.linked_view(columns, tracks, _crossings(NASTY), heading),
     }
@@ -309,3 +311,40 @@ def test_a_changed_setting_is_told_against_the_run_before(reduced_demo, tmp_path
     text = (folder / "reduced" / "report.html").read_text(encoding="utf-8")
     part = text.split("against the run before")[1].split("end of the part that depends")[0]
     assert "levelling.robust: True → False" in part
+
+
+@pytest.mark.slow
+def test_when_the_disk_is_full_the_old_report_stays(reduced_demo, tmp_path):
+    """A limit on the size of files stands for a full disk: writing fails in the same way."""
+    import subprocess
+    import sys
+
+    from conftest import ROOT
+
+    folder = shutil.copytree(reduced_demo, tmp_path / "demo")
+    report_file = folder / "reduced" / "report.html"
+    old = report_file.read_bytes()
+    words = f"ulimit -f 1024; exec {sys.executable} -m snakemake -d {folder} -R report"
+    done = subprocess.run(["bash", "-c", words], cwd=ROOT, capture_output=True, text=True, stdin=subprocess.DEVNULL)
+    told = done.stdout + done.stderr
+    assert done.returncode == 1
+    assert "cannot be read or written. File too large" in told
+    assert "Traceback" not in told
+    assert report_file.read_bytes() == old
+    assert not list((folder / "reduced").glob(".report-*"))
+    again = run_workflow(folder)
+    assert again.returncode == 0, again.stdout + again.stderr
+
+
+@pytest.mark.slow
+def test_a_survey_without_a_profile_still_gets_a_report_that_says_why(tmp_path):
+    from conftest import copy_demo
+
+    folder = copy_demo(tmp_path / "demo")
+    log = folder / "lines.csv"
+    log.write_text(re.sub(r",(line|tie),", ",transit,", log.read_text(encoding="utf-8")), encoding="utf-8")
+    done = run_workflow(folder)
+    assert done.returncode == 0, done.stdout + done.stderr
+    text = (folder / "reduced" / "report.html").read_text(encoding="utf-8")
+    assert "no track crosses another" in text or "no crossing" in text
+    assert "0 profiles" in (folder / "reduced" / "summary.txt").read_text(encoding="utf-8")
