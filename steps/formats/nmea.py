@@ -25,7 +25,7 @@ import pandas as pd
 
 from steps.errors import SurveyError, mistake
 from steps.formats.packed import read_bytes
-from steps.formats.sentences import GGA, GLL, HDT, KINDS, NONE, NS, RMC, VTG, ZDA, blocks, take_apart
+from steps.formats.sentences import GLL, HDT, KINDS, NONE, NS, VTG, ZDA, Part, blocks, holding, take_apart
 
 DAY = 86_400 * NS
 ROLLOVER_DAYS = 1024 * 7  # GPS counts weeks modulo 1024 (IS-GPS-200, 20.3.3.3.1.1)
@@ -88,26 +88,36 @@ def parse_nmea(data: bytes, where: str = "NMEA 0183", stamp: str = "sentence") -
         raise SurveyError(mistake(where, "must hold NMEA 0183 sentences", "an empty file"))
     if b"\n" not in data and b"\r" in data:
         data = data.replace(b"\r", b"\n")
-    parts, counts, skipped = [], {"lines": 0}, {}
-    for part, found, passed in _in_turn(take_apart, blocks(data)):
-        part["row"] += counts["lines"] + 1
-        parts.append(part)
-        for total, own in ((counts, found), (skipped, passed)):
-            for name, number in own.items():
-                total[name] = total.get(name, 0) + number
+    log = _put_together(list(_in_turn(take_apart, blocks(data))))
+    counts, s = log.counts, log.values
     if counts["lines"] == counts.get("blank", 0) + counts.get("no sentence", 0) + counts.get("malformed", 0):
         first = data.lstrip()[:60].split(b"\n")[0].decode("ascii", "replace")
         remedy = "Is this the right file?"
         raise SurveyError(mistake(where, "must hold NMEA 0183 sentences such as $GPGGA,...", first, remedy))
-    counts |= _by_name(skipped)
-    s = {name: np.concatenate([part[name] for part in parts]) for name in parts[0]}
-    del parts
+    counts |= _by_name(log.skipped)
     notes: list[str] = []
     time, late = _times(s, where, stamp, notes)
     fixes = _fixes(s, time, stamp, counts)
-    headings = _headings(s, time, late, counts)
-    _judge(s, fixes, notes)
+    headings = _headings(s, late, counts)
+    _judge(log, fixes, notes)
     return Log(fixes, headings, {name: number for name, number in counts.items() if number}, notes)
+
+
+def _put_together(parts: list[Part]) -> Part:
+    """Make one of the parts of a log; rows count from 1."""
+    row = 1
+    whole = Part({}, {}, {}, {}, sum(part.doubtful for part in parts))
+    for part in parts:
+        part.values["row"] += row
+        row += part.counts["lines"]
+        for total, own in ((whole.counts, part.counts), (whole.skipped, part.skipped)):
+            for name, number in own.items():
+                total[name] = total.get(name, 0) + number
+        for kind, heard in part.talkers.items():
+            whole.talkers.setdefault(kind, set()).update(heard)
+    for name in list(parts[0].values):
+        whole.values[name] = np.concatenate([part.values.pop(name) for part in parts])
+    return whole
 
 
 def _in_turn(function: Callable, items: Iterable) -> Iterator:
@@ -153,11 +163,11 @@ def _times(s: dict, where: str, stamp: str, notes: list[str]) -> tuple[np.ndarra
             remedy = "Leave `stamp` out to use the times of the sentences."
             raise SurveyError(mistake(where, "must have the logger's time before each sentence", "none", remedy))
         return stamps, _carried(stamps)
-    tells = np.flatnonzero((s["kind"] == RMC) | (s["kind"] == ZDA))
-    tells, day = tells[s["day"] != NONE], s["day"][s["day"] != NONE]
-    tells, day = tells[tod[tells] != NONE], day[tod[tells] != NONE]
+    tells, day = holding(s["kind"], "day"), s["day"]
+    dated = (day != NONE) & (tod[tells] != NONE)
+    tells, day = tells[dated], day[dated]
     both = stamped[tells]
-    shift = int(np.median(day[both] + tod[tells[both]] - stamps[tells[both]])) if both.any() else 0
+    shift = _usual(day[both] + tod[tells[both]] - stamps[tells[both]])
     timed = np.flatnonzero(tod != NONE)
     # Days since the first timed sentence, counted at midnights; then fixed by the sentences that know their day.
     step = np.diff(tod[timed])
@@ -180,12 +190,17 @@ def _times(s: dict, where: str, stamp: str, notes: list[str]) -> tuple[np.ndarra
     elif (positions & s["valid"] & np.isfinite(s["a"]) & (tod != NONE)).any():
         remedy = "Log ZDA or RMC as well, or let the logger stamp the sentences."
         raise SurveyError(mistake(where, "must give a date: by ZDA, RMC or the logger's stamp", "none", remedy))
-    both = stamped & (time != NONE)
-    shift = int(np.median(time[both] - stamps[both])) if both.any() else 0
+    both = timed[stamped[timed] & (time[timed] != NONE)]
+    shift = _usual(time[both] - stamps[both])
     if abs(shift) > CLOSE:
         notes.append(_difference(shift, bool((s["kind"] == HDT).any())))
         stamps = np.where(stamped, stamps + shift, NONE)
-    return time, np.where(stamped, stamps, _carried(time))
+    return time, stamps if stamped.all() else np.where(stamped, stamps, _carried(time))
+
+
+def _usual(difference: np.ndarray) -> int:
+    """Return the median of differences, from a hundred thousand of them at most; 0 where there is none."""
+    return int(np.median(difference[:: 1 + len(difference) // 100_000])) if len(difference) else 0
 
 
 def _latest(known: np.ndarray) -> np.ndarray:
@@ -220,79 +235,87 @@ def _difference(shift: int, headings: bool) -> str:
 
 def _fixes(s: dict, time: np.ndarray, stamp: str, counts: dict) -> pd.DataFrame:
     """Make one fix of the position sentences of each epoch, with course and speed of RMC or VTG."""
-    kind, valid = s["kind"], s["valid"]
-    position = kind <= GLL
-    placed = np.isfinite(s["a"]) & np.isfinite(s["b"]) & ((s["tod"] != NONE) | (stamp == "logger"))
-    use = position & valid & placed & (time != NONE)
-    for number in (GGA, RMC, GLL):
-        own = kind == number
-        counts[f"{KINDS[number]} without fix"] = int(np.count_nonzero(own & ~valid))
-        counts[f"{KINDS[number]} without value"] = int(np.count_nonzero(own & valid & ~placed))
-        counts[f"{KINDS[number]} without stamp"] = int(np.count_nonzero(own & valid & placed & ~use))
-        counts[KINDS[number]] = int(np.count_nonzero(own & use))
-    tells = np.flatnonzero((kind == RMC) | (kind == ZDA))
+    at = np.flatnonzero(s["kind"] <= GLL)
+    kind, valid, latitude, longitude, tod = s["kind"][at], s["valid"][at], s["a"][at], s["b"], s["tod"][at]
+    placed = np.isfinite(latitude) & np.isfinite(longitude) & ((tod != NONE) | (stamp == "logger"))
+    use = valid & placed & (time[at] != NONE)
+    fates = {
+        "": use,
+        " without fix": ~valid,
+        " without value": valid & ~placed,
+        " without stamp": valid & placed & ~use,
+    }
+    for fate, rows in fates.items():
+        for number, found in enumerate(np.bincount(kind[rows], minlength=3).tolist()):
+            counts[KINDS[number] + fate] = found
+    tells = holding(s["kind"], "day")
     dated = (s["day"] != NONE) & (s["tod"][tells] != NONE)
-    zda = kind[tells] == ZDA
-    counts["ZDA"], counts["ZDA without value"] = (int(np.count_nonzero(zda & x)) for x in (dated, ~dated))
-    tells = np.flatnonzero((kind == RMC) | (kind == VTG))
-    moving = valid[tells] & (np.isfinite(s["course"]) | np.isfinite(s["speed"]))
-    vtg = kind[tells] == VTG
-    counts["VTG"], counts["VTG without value"] = (int(np.count_nonzero(vtg & x)) for x in (moving, ~moving))
+    zda = s["kind"][tells] == ZDA
+    counts["ZDA"], counts["ZDA without value"] = (int(np.count_nonzero(zda & rows)) for rows in (dated, ~dated))
+    tells = holding(s["kind"], "course")
+    moving = s["valid"][tells] & (np.isfinite(s["course"]) | np.isfinite(s["speed"]))
+    vtg = s["kind"][tells] == VTG
+    counts["VTG"], counts["VTG without value"] = (int(np.count_nonzero(vtg & rows)) for rows in (moving, ~moving))
 
-    at = np.flatnonzero(use)
     names = ["latitude_deg", "longitude_deg", "course_deg", "speed_mps"]
-    if len(at) == 0:
+    if not use.any():
         empty = {"time_utc": np.zeros(0, "datetime64[ns]")} | {name: np.zeros(0) for name in names}
         return pd.DataFrame(empty | {"source_row": np.zeros(0, np.int64)})
+    own = np.flatnonzero(use)
     # Sentences of an epoch follow each other and say the same time of day.
-    key = np.where(s["tod"][at] == NONE, -at, s["tod"][at]) if stamp == "logger" else time[at]
+    key = time[at[own]]
+    if stamp == "logger":
+        key = np.where(tod[own] == NONE, -at[own], tod[own])
     begins = np.concatenate([[0], np.flatnonzero(key[1:] != key[:-1]) + 1])
-    n, order = len(at), np.arange(len(at))
-    best = np.minimum.reduceat(kind[at].astype(np.int64) * n + order, begins) % n
+    n = len(own)
+    if len(begins) == n:
+        best = np.arange(n)
+    else:
+        best = np.minimum.reduceat(kind[own].astype(np.int64) * n + np.arange(n), begins) % n
     # The course and speed of an epoch are the first told in it, up to the first sentence of the next one.
-    tells_motion = np.flatnonzero(moving & (vtg | use[tells]))
-    epoch = np.searchsorted(at[begins], tells[tells_motion], side="right") - 1
-    tells_motion, epoch = tells_motion[epoch >= 0], epoch[epoch >= 0]
+    used = np.zeros(len(s["kind"]), bool)
+    used[at[own]] = True
+    told = np.flatnonzero(moving & (vtg | used[tells]))
+    epoch = np.searchsorted(at[own[begins]], tells[told], side="right") - 1
+    told, epoch = told[epoch >= 0], epoch[epoch >= 0]
     first = np.flatnonzero(np.diff(epoch, prepend=-1))
     motion = {name: np.full(len(begins), np.nan) for name in ("course", "speed")}
     for name, values in motion.items():
-        values[epoch[first]] = s[name][tells_motion[first]]
-    chosen = at[best]
-    longitude = s["b"][chosen]
+        values[epoch[first]] = s[name][told[first]]
+    chosen = own[best]
     return pd.DataFrame(
         {
-            "time_utc": time[chosen].astype("datetime64[ns]"),
-            "latitude_deg": s["a"][chosen],
-            "longitude_deg": np.where(longitude == 180.0, -180.0, longitude),
+            "time_utc": time[at[chosen]].astype("datetime64[ns]"),
+            "latitude_deg": latitude[chosen],
+            "longitude_deg": np.where(longitude[chosen] == 180.0, -180.0, longitude[chosen]),
             "course_deg": motion["course"],
             "speed_mps": motion["speed"],
-            "source_row": s["row"][chosen],
+            "source_row": s["row"][at[chosen]],
         }
     )
 
 
-def _headings(s: dict, time: np.ndarray, late: np.ndarray, counts: dict) -> pd.DataFrame:
+def _headings(s: dict, late: np.ndarray, counts: dict) -> pd.DataFrame:
     """Gather the headings with the time of each."""
-    own = s["kind"] == HDT
-    told = own & s["valid"] & np.isfinite(s["a"])
-    use = told & (late != NONE)
+    own = np.flatnonzero(s["kind"] == HDT)
+    heading, time = s["a"][own], late[own]
+    told = s["valid"][own] & np.isfinite(heading)
+    use = told & (time != NONE)
     counts["HDT"] = int(np.count_nonzero(use))
-    counts["HDT without value"] = int(np.count_nonzero(own & ~told))
+    counts["HDT without value"] = int(np.count_nonzero(~told))
     counts["HDT without time"] = int(np.count_nonzero(told & ~use))
-    return pd.DataFrame({"time_utc": late[use].astype("datetime64[ns]"), "heading_deg": s["a"][use]})
+    return pd.DataFrame({"time_utc": time[use].astype("datetime64[ns]"), "heading_deg": heading[use]})
 
 
-def _judge(s: dict, fixes: pd.DataFrame, notes: list[str]) -> None:
+def _judge(log: Part, fixes: pd.DataFrame, notes: list[str]) -> None:
     """Note what deserves a look: several receivers, dead reckoning, a clock that goes back."""
-    for number in (GGA, RMC, GLL):
-        talkers = np.unique(s["talker"][(s["kind"] == number) & s["valid"]])
+    for number, talkers in sorted(log.talkers.items()):
         if len(talkers) > 1:
-            names = ", ".join(sorted(int(talker).to_bytes(2, "little").decode("ascii") for talker in talkers)[:5])
+            names = ", ".join(sorted(talker.to_bytes(2, "little").decode("ascii") for talker in talkers)[:5])
             notes.append(f"{KINDS[number]} comes from several talkers ({names}), whose antennas may stand apart.")
             break
-    doubtful = int(np.count_nonzero((s["kind"] <= GLL) & s["valid"] & s["doubtful"]))
-    if doubtful:
-        notes.append(f"{doubtful} positions are dead reckoning (GGA quality 6, mode E); they are used.")
+    if log.doubtful:
+        notes.append(f"{log.doubtful} positions are dead reckoning (GGA quality 6, mode E); they are used.")
     back = np.flatnonzero(np.diff(fixes["time_utc"].to_numpy()) < np.timedelta64(0))
     if len(back):
         row = int(fixes["source_row"].iloc[back[0] + 1])

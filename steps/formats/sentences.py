@@ -21,6 +21,7 @@ KMH_MPS = 1000.0 / 3600.0
 
 KINDS = ("GGA", "RMC", "GLL", "VTG", "ZDA", "HDT")  # of the first three the earlier is the better position
 GGA, RMC, GLL, VTG, ZDA, HDT = range(6)
+HOLDERS = {"b": (GGA, RMC, GLL), "day": (RMC, ZDA), "course": (RMC, VTG), "speed": (RMC, VTG)}
 FEWEST_FIELDS = np.array([14, 9, 4, 8, 4, 2])  # a sentence with fewer was cut short
 _CODES = [int.from_bytes(name.encode(), "little") for name in KINDS]
 _MANUAL, _SIMULATED, _ESTIMATED = ord("7"), ord("8"), ord("6")  # qualities of GGA that are no fix, and dead reckoning
@@ -52,7 +53,35 @@ def blocks(data: bytes) -> Iterator[np.ndarray]:
         start = end
 
 
-def take_apart(block: np.ndarray) -> tuple[dict, dict, dict]:
+@dataclass
+class Part:
+    """What is read of a block of lines, or of a log.
+
+    Attributes
+    ----------
+    values : dict of str to array
+        Of each sentence of `KINDS`: ``row`` (from 0 in the block), ``kind``, ``tod`` and ``stamp`` (ns, or NONE),
+        ``valid``, ``a`` (latitude, or heading; NaN where there is none). Of some kinds only, see `HOLDERS`: ``b``
+        (longitude), ``day`` (ns, or NONE), ``course`` (degrees), ``speed`` (m/s).
+    counts : dict of str to int
+        Lines of the block, and those that are no sentence of `KINDS`, by reason.
+    skipped : dict of str to int
+        Sentences of other kinds, by name.
+    talkers : dict of int to set of int
+        By kind of position, the talkers that were heard.
+    doubtful : int
+        Positions by dead reckoning.
+
+    """
+
+    values: dict[str, np.ndarray]
+    counts: dict[str, int]
+    skipped: dict[str, int]
+    talkers: dict[int, set[int]]
+    doubtful: int
+
+
+def take_apart(block: np.ndarray) -> Part:
     """Read every line of a block.
 
     Parameters
@@ -62,14 +91,7 @@ def take_apart(block: np.ndarray) -> tuple[dict, dict, dict]:
 
     Returns
     -------
-    part : dict of str to array
-        Of each sentence of `KINDS`: row (from 0 in the block), kind, talker, tod and stamp (ns, or NONE), valid,
-        doubtful, a and b (latitude and longitude, or heading in a; NaN where there is none). Of each RMC and ZDA: day
-        (ns, or NONE). Of each RMC and VTG: course (degrees) and speed (m/s).
-    counts : dict of str to int
-        Lines of the block, and those that are no sentence of `KINDS`, by reason.
-    skipped : dict of str to int
-        Sentences of other kinds.
+    Part
 
     """
     text = block[:-8]
@@ -117,32 +139,35 @@ def take_apart(block: np.ndarray) -> tuple[dict, dict, dict]:
     chosen = np.flatnonzero(good & (kind >= 0))
     kind, at, fields, star = kind[chosen], at[chosen], fields[chosen], star[chosen]
     n = len(chosen)
-    part = {
+    values = {
         "row": row[chosen],
         "kind": kind,
-        "talker": (word[chosen] >> np.uint64(8)).astype(np.uint16),
         "tod": np.full(n, NONE),
         "stamp": _stamps(block, start[chosen], begin[chosen]),
         "valid": np.ones(n, bool),
-        "doubtful": np.zeros(n, bool),
         "a": np.full(n, np.nan),
-        "b": np.full(n, np.nan),
     }
-    sparse = {
-        "day": np.flatnonzero((kind == RMC) | (kind == ZDA)),
-        "course": np.flatnonzero((kind == RMC) | (kind == VTG)),
-    }
-    sparse["speed"] = sparse["course"]
-    part["day"] = np.full(len(sparse["day"]), NONE)
-    part["course"], part["speed"] = np.full((2, len(sparse["course"])), np.nan)
+    holders = {name: holding(kind, name) for name in HOLDERS}
+    values |= {name: np.full(len(rows), NONE if name == "day" else np.nan) for name, rows in holders.items()}
+    talkers, doubtful = {}, 0
     for number, read in enumerate((_gga, _rmc, _gll, _vtg, _zda, _hdt)):
         which = np.flatnonzero(kind == number)
-        if len(which):
-            values = read(_Fields(block, special, at[which], fields[which], star[which]))
-            for name, column in values.items():
-                into = np.searchsorted(sparse[name], which) if name in sparse else which
-                part[name][into] = column
-    return part, counts, names
+        if len(which) == 0:
+            continue
+        found = read(_Fields(block, special, at[which], fields[which], star[which]))
+        if number <= GLL:
+            doubtful += int(np.count_nonzero(found.pop("doubtful") & found["valid"]))
+            codes = (word[chosen[which]] >> np.uint64(8)).astype(np.uint16)
+            talkers[number] = {int(codes[0])} if (codes == codes[0]).all() else set(np.unique(codes).tolist())
+        for name, column in found.items():
+            into = np.searchsorted(holders[name], which) if name in holders else which
+            values[name][into] = column
+    return Part(values, counts, names, talkers, doubtful)
+
+
+def holding(kind: np.ndarray, name: str) -> np.ndarray:
+    """Return the sentences of the kinds that hold a value of `HOLDERS`."""
+    return np.flatnonzero(np.logical_or.reduce([kind == number for number in HOLDERS[name]]))
 
 
 def _special(text: np.ndarray, scratch: np.ndarray) -> np.ndarray:
@@ -248,14 +273,17 @@ class _Fields:
     fields: np.ndarray
     end: np.ndarray
 
+    def __post_init__(self):
+        self.fewest = int(self.fields.min())
+
     def place(self, number):
         """Return where a field begins and ends; both the same where a sentence has no such field."""
-        token = np.minimum(self.at + number, len(self.special) - 1)
-        begin = self.special[token] + 1
-        if self.fields.min() > number:
-            return begin, self.special[token + 1]
+        token = self.at + number
+        if self.fewest > number:
+            return self.special[token] + 1, self.special[token + 1]
+        token = np.minimum(token, len(self.special) - 1)
         after = self.special[np.minimum(token + 1, len(self.special) - 1)]
-        begin = np.minimum(begin, self.end)
+        begin = np.minimum(self.special[token] + 1, self.end)
         return begin, np.where(self.fields >= number, np.minimum(after, self.end), begin)
 
     def letter(self, number):
@@ -288,20 +316,20 @@ class _Decimal:
 
 
 def _cells(block, begin, width):
-    """Copy `width` bytes from each place."""
+    """Copy `width` bytes from each place: an array of shape (width, n), so that one column of cells lies together."""
     window = np.ndarray(len(block) - width + 1, f"V{width}", block, strides=(1,))
-    return window[begin].view(np.uint8).reshape(-1, width)
+    return np.ascontiguousarray(window[begin].view(np.uint8).reshape(-1, width).T)
 
 
 def _horner(digit, columns: range):
     """Put the digits of neighbouring columns together, two at a time."""
     width = len(columns)
-    value = np.zeros(len(digit), np.int32 if width < 10 else np.int64)
+    value = np.zeros(digit.shape[1], np.int32 if width < 10 else np.int64)
     if width % 2:
-        value += digit[:, columns[0]]
+        value += digit[columns[0]]
     for column in columns[width % 2 :: 2]:
         value *= 100
-        value += digit[:, column] * np.uint8(10) + digit[:, column + 1]
+        value += digit[column] * np.uint8(10) + digit[column + 1]
     return value
 
 
@@ -318,7 +346,7 @@ def _decimal(block, begin, end) -> _Decimal:
         for place, chosen in _points(digit, size):
             if size == 1 and place == 0:
                 continue
-            own = digit if chosen is None else digit[chosen]
+            own = digit if chosen is None else digit[:, chosen]
             into = chosen if rows is None else rows if chosen is None else rows[chosen]
             scale = np.int64(10 ** max(size - place - 1, 0))
             number = _Decimal(_horner(own, range(place)), _horner(own, range(place + 1, size)), scale, np.int64(place))
@@ -339,15 +367,15 @@ def _decimal(block, begin, end) -> _Decimal:
 
 def _points(digit, size):
     """Tell where the decimal points of cells of one width are: (place, rows), with None for all rows."""
-    odd = np.flatnonzero(digit.max(axis=0) > 9)
+    odd = np.flatnonzero(digit.max(axis=1) > 9)
     if len(odd) == 0:
         return [(size, None)]
     point = digit == 254  # "." is 46
-    if len(odd) == 1 and point[:, odd[0]].all():
+    if len(odd) == 1 and point[odd[0]].all():
         return [(int(odd[0]), None)]
-    place = np.where(point.any(axis=1), point.argmax(axis=1), size)
-    proper = ((digit <= 9) | (np.arange(size) == place[:, None])).all(axis=1)
-    return [(int(p), np.flatnonzero(proper & (place == p))) for p in np.unique(place[proper])]
+    place = np.where(point.any(axis=0), point.argmax(axis=0), size)
+    proper = ((digit <= 9) | (np.arange(size)[:, None] == place)).all(axis=0)
+    return [(int(p), np.flatnonzero(proper & (place == p))) for p in np.flatnonzero(np.bincount(place[proper]))]
 
 
 def _time_of_day(s: _Fields, number) -> np.ndarray:
@@ -474,11 +502,11 @@ def _stamps_like(block, place, size, found):
     cells = _cells(block, place[begins], 16)
     digit = cells - np.uint8(48)
     columns = [range(0, 4), range(5, 7), range(8, 10), range(11, 13), range(14, 16)]
-    proper = np.ones(len(cells), bool)
+    proper = np.ones(len(begins), bool)
     for column in (4, 7, 10, 13):
-        proper &= cells[:, column] == cells[0, column]
+        proper &= cells[column] == cells[column, 0]
     for group in columns:
-        proper &= (digit[:, group] <= 9).all(axis=1)
+        proper &= (digit[group] <= 9).all(axis=0)
     year, month, day, hour, minute = (_horner(digit, group) for group in columns)
     midnight = _midnight(year, month, day)
     proper &= (midnight != NONE) & (hour < 24) & (minute < 60)
@@ -491,7 +519,7 @@ def _stamps_like(block, place, size, found):
     fraction = range(*found.span(7)) if found.group(7) else range(0)
     digits = [1, 2, *(column - 16 for column in fraction)]
     for column in range(size - 16):
-        like &= (digit[:, column] <= 9) if column in digits else (cells[:, column] == cells[0, column])
+        like &= (digit[column] <= 9) if column in digits else (cells[column] == cells[column, 0])
     second = _horner(digit, range(1, 3))
     like &= second <= 60
     ns += second.astype(np.int64) * NS
