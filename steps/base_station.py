@@ -48,8 +48,9 @@ class Series:
     def at(self, time_s: np.ndarray) -> np.ndarray:
         """Interpolate linearly; NaN beside a missing value, the first and the last value beyond the ends."""
         place = np.clip((time_s - self.start_s) / self.step_s, 0, len(self.value) - 1)
-        tick = place.astype(np.int64)
+        tick = (place + 1e-6).astype(np.int64)
         share = place - tick
+        share[share < 1e-6] = 0.0  # a tick's own time, but for rounding: its neighbour may be missing
         here = self.value[tick]
         return np.where(share == 0, here, here + share * (self.value[np.minimum(tick + 1, len(self.value) - 1)] - here))
 

@@ -37,6 +37,7 @@ from steps.settings import Diurnal
 EARTH_RADIUS_KM = 6371.0
 FADE_S = 3600.0
 NEAREST_KM = 10.0  # nearer than this, distance no longer tells stations apart
+PLANE_KM = 300.0  # a plane is believed about so far
 PIECE = 1 << 14  # readings worked on together: what fits the cache
 SAMPLES = 4000  # of a station, to calibrate with
 FEWEST = 60  # samples that a calibration may rest on
@@ -105,7 +106,7 @@ def predict(
     found = Prediction(
         *(np.full(len(time_s), nothing) for nothing in (np.nan, np.nan, np.nan, False, -1))  # in the fields' order
     )
-    for k in range(0, len(placed), PIECE):
+    for k in range(0, len(placed) if stations else 0, PIECE):
         here = placed[k : k + PIECE]
         piece = _predict_piece(stations, time_s[here], lat[here], lon[here], settings)
         for part in fields(Prediction):
@@ -202,15 +203,13 @@ def _weights(away, fade, lat, lon, stations, settings) -> np.ndarray:
         return weight
     if settings.combine == "distance":
         return fade / (away**2 + NEAREST_KM**2)
-    # A plane through the stations, in tangent coordinates at the ship: its value at the ship is a weighted sum of
-    # theirs. A gradient of the size that the law of error expects is the prior, so that two stations, or three in a
-    # row, or one that fades out, are no special cases.
-    x = ((np.array([s.longitude_deg for s in stations])[:, None] - lon + 180.0) % 360.0 - 180.0) * np.cos(
-        np.radians(lat)
-    )
-    y = np.array([s.latitude_deg for s in stations])[:, None] - lat
-    x, y = (np.where(fade > 0, 1.112 * part, 0.0) for part in (x, y))  # hundreds of km
+    # A plane through the stations: its value at the ship is a weighted sum of theirs. A gradient of the size that the
+    # law of error expects is the prior, so that two stations, or three in a row, or one that fades out, are no special
+    # cases; it grows firmer far from the stations, where a plane means nothing.
+    x, y = _seen_from(lat, lon, stations, np.where(fade > 0, away, 0.0) / 100.0)
     prior = max(settings.sigma_at_base_nt, 0.05) ** 2 / max(settings.sigma_nt_per_100km, 0.05) ** 2
+    mean_km = (fade * np.where(fade > 0, away, 0.0)).sum(axis=0) / np.maximum(fade.sum(axis=0), 1e-12)
+    prior = prior * (1 + (mean_km / PLANE_KM) ** 4)
     n, sx, sy = fade.sum(axis=0), (fade * x).sum(axis=0), (fade * y).sum(axis=0)
     sxx, syy = (fade * x * x).sum(axis=0) + prior, (fade * y * y).sum(axis=0) + prior
     sxy = (fade * x * y).sum(axis=0)
@@ -218,6 +217,17 @@ def _weights(away, fade, lat, lon, stations, settings) -> np.ndarray:
     a, b, c = sxx * syy - sxy**2, sxy * sy - sx * syy, sx * sxy - sxx * sy
     determinant = n * a + sx * b + sy * c
     return fade * (a + b * x + c * y) / np.where(determinant > 0, determinant, 1.0)
+
+
+def _seen_from(lat, lon, stations, distance) -> tuple[np.ndarray, np.ndarray]:
+    """Return where stations lie as seen from the ship, east and north, in the unit of `distance`: rows are stations."""
+    phi, lam = np.radians(lat), np.radians(lon)
+    phi_s = np.radians([station.latitude_deg for station in stations])[:, None]
+    turn = np.radians([station.longitude_deg for station in stations])[:, None] - lam
+    east = np.cos(phi_s) * np.sin(turn)
+    north = np.cos(phi) * np.sin(phi_s) - np.sin(phi) * np.cos(phi_s) * np.cos(turn)
+    scale = distance / np.maximum(np.hypot(east, north), 1e-12)
+    return scale * east, scale * north
 
 
 # -- sigma -----------------------------------------------------------------------------------------------------------

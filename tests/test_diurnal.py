@@ -200,9 +200,12 @@ def test_the_plane_is_a_least_squares_fit_with_a_prior_slope():
     own = network(sloping, datum=100.0)
     lat, lon, settings = 45.0, -21.0, Diurnal(combine="plane", local_time_shift=False)
     found = at_ship(own, [1.3 * DAY], lat, lon, combine="plane", local_time_shift=False).variation_nt[0]
-    ratio = settings.sigma_at_base_nt / settings.sigma_nt_per_100km
-    rows = [[1, 1.112 * (s_lon - lon) * np.cos(np.radians(lat)), 1.112 * (s_lat - lat)] for _, s_lat, s_lon in AROUND]
+    geod = Geod(a=6371000.0, b=6371000.0)
+    seen = [geod.inv(lon, lat, s_lon, s_lat) for _, s_lat, s_lon in AROUND]
+    rows = [[1, d / 1e5 * np.sin(np.radians(az)), d / 1e5 * np.cos(np.radians(az))] for az, _, d in seen]
     values = [sloping(np.array([1.3 * DAY]), s_lat, s_lon)[0] for _, s_lat, s_lon in AROUND]
+    ratio = settings.sigma_at_base_nt / settings.sigma_nt_per_100km
+    ratio *= np.sqrt(1 + (np.mean([d for *_, d in seen]) / 300e3) ** 4)
     fit = np.linalg.lstsq(np.array([*rows, [0, ratio, 0], [0, 0, ratio]]), np.array([*values, 0, 0]), rcond=None)[0]
     assert found == pytest.approx(fit[0], abs=0.03)
 
