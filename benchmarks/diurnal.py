@@ -1,6 +1,6 @@
 """Diurnal term of a long survey: time and memory by stations and readings, in one run.
 
-python benchmarks/diurnal.py          (60 days of one-minute records; 1, 6 and 24 stations; 0.5 and 5.2 million readings)
+python benchmarks/diurnal.py     (60 days of one-minute records; 1, 6 and 24 stations; 0.5 and 5.2 million readings)
 """
 
 import resource
