@@ -13,9 +13,11 @@ import sys
 import tempfile
 from pathlib import Path
 
-from steps import ingest, lines, position, stage, survey
+from steps import base_records, ingest, lines, position, stage, survey
 from steps.errors import SurveyError
 from steps.formats import tables
+
+ALL_TIME_S = (-1e10, 1e10)  # seconds about 1970
 
 
 def raw_problems(member: survey.Member) -> list[str]:
@@ -49,10 +51,8 @@ def raw_problems(member: survey.Member) -> list[str]:
     for file in member.raw_inputs("position").get("cable", []):
         attempt(lambda path: position.check_cable(tables.read_table(path, position.CABLE_LOG), path), file)
     for number, source in enumerate(own.diurnal.base_stations):
-        from steps import diurnal
-
         for file in member.raw_inputs("diurnal")[f"base_{number}"]:
-            attempt(diurnal.read_station, source, [Path(file)])
+            attempt(base_records.read_records, [source], {"base_0": [Path(file)]}, ALL_TIME_S)
     return found
 
 
