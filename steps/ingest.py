@@ -312,7 +312,7 @@ def _each(read: Callable, items: list) -> list:
             return error
 
     with ThreadPoolExecutor(2) as pool:
-        results = list(pool.map(attempt, items))
+        results = list(stage.progress(pool.map(attempt, items), "ingest", len(items)))
     wrong = [sentence for result in results if isinstance(result, SurveyError) for sentence in result.sentences]
     if len(wrong) > MOST_MISTAKES:
         wrong = [*wrong[:MOST_MISTAKES], f"And {len(wrong) - MOST_MISTAKES} more mistakes in raw files."]

@@ -432,7 +432,7 @@ def main(job: stage.Job) -> None:
     columns = {name: table[name].to_numpy() for name in NEEDED}
     folder, files = job.target("csv"), file_names(lines["line"].tolist())
     parts, told = [], []
-    for number in np.flatnonzero(wanted):
+    for number in stage.progress(np.flatnonzero(wanted), job.name):
         line, kind = lines["line"].iloc[number], lines["kind"].iloc[number]
         if number not in frames:
             continue

@@ -11,12 +11,33 @@ import shutil
 import sys
 import tempfile
 import time
+from collections.abc import Iterable
 from pathlib import Path
 
 import pandas as pd
+from tqdm import tqdm
 
 from steps import columns, provenance, settings
 from steps.errors import SurveyError
+
+
+def progress(items: Iterable, what: str, total: int | None = None) -> Iterable:
+    """Go through items with a progress bar where a terminal is attached; in a log file nothing is written.
+
+    Parameters
+    ----------
+    items : iterable
+    what : str
+        What the bar is labelled with.
+    total : int, optional
+        Number of items, where they cannot be counted.
+
+    Returns
+    -------
+    iterable
+
+    """
+    return tqdm(items, what, total, file=sys.stdout, disable=not sys.stdout.isatty(), leave=False, delay=1.0)
 
 
 class Job:

@@ -264,7 +264,10 @@ def _matches(folder: Path, pattern: str, folders: bool = False) -> list[str]:
 
 def closing_lines() -> list[str]:
     """Return what a run ends with: where the results are, and what deserves a look first."""
-    record = json.loads(Path("reduced/report_record.json").read_text(encoding="utf-8"))
+    path = Path("reduced/report_record.json")
+    if not path.is_file():  # a run that was told to end before the report
+        return [f"Results so far: {Path('reduced').resolve()}"]
+    record = json.loads(path.read_text(encoding="utf-8"))
     first = [f"  {sentence}" for sentence in record["look_first"]]
     lines = [f"Results: {Path('reduced').resolve()}", f"Open {Path('reduced', 'report.html').resolve()}"]
     return [*lines, *(["Deserves a look first:", *first] if first else [])]
