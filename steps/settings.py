@@ -359,7 +359,9 @@ class Heading(Section):
     widest_gap_deg: float = Field(
         100.0, gt=0, le=360, description="not fitted where headings leave a wider gap in the circle"
     )
-    sigma_leg_nt: float = Field(0.5, ge=0, description="error of a whole calibration leg, one sigma, as lines have it")
+    sigma_leg_nt: float = Field(
+        1.0, ge=0, le=1000, description="expected error of a whole calibration leg, one sigma; it is then estimated"
+    )
 
 
 class Crossovers(Section):
