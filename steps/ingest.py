@@ -288,6 +288,10 @@ def read_navigation(sources: list, inputs: dict) -> tuple[list[pd.DataFrame], li
             own, gyro = table.dropna(subset=["latitude_deg", "longitude_deg"]), table[:0]
         else:
             own, gyro, counts = _delimited_navigation(source, path)
+            back = np.flatnonzero(np.diff(own["time_utc"].to_numpy()) < np.timedelta64(0)) + 1
+            if len(back):
+                row = int(own["source_row"].iloc[back[0]])
+                notes.append(f"the time of the fixes goes back {len(back)} times, first in row {row}; put in order.")
         entry = _entry(path, counts, own["time_utc"] if len(own) else gyro["time_utc"])
         return own, gyro, entry | {"source": number, "notes": notes}
 

@@ -231,7 +231,10 @@ class Ingest(Section):
 
     readings: Annotated[DelimitedReadings | TracklineData, Field(discriminator="format")]
     navigation: list[Annotated[DelimitedNavigation | NmeaNavigation | TracklineData, Field(discriminator="format")]] = (
-        Field(min_length=1, description="navigation sources, joined")
+        Field(
+            min_length=1,
+            description="navigation sources, in order of preference: a later one fills gaps of over a minute",
+        )
     )
 
 

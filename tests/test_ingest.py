@@ -306,6 +306,7 @@ def test_what_deserves_a_look_is_noted_with_file_and_row(survey):
 def test_two_sources_of_navigation_and_a_gyro_of_its_own(survey):
     delimited = CSV | {"columns": {"latitude_deg": "lat", "longitude_deg": "lon", "heading_deg": "hdg"}}
     table = "time,lat,lon,hdg\n2024-05-01T00:00:00,45 00.0 N,30 00.0 W,360\n2024-05-01T00:00:50,,,10\n"
+    table += "2024-05-01T00:00:59,45 00.1 N,30 00.1 W,\n2024-05-01T00:00:58.5,45 00.1 N,30 00.1 W,\n"
     survey.run(
         {"a.csv": logger(MINUTE, [45000] * 60)},
         {"nav.csv": table},
@@ -313,14 +314,16 @@ def test_two_sources_of_navigation_and_a_gyro_of_its_own(survey):
         navigation_settings=[delimited, NMEA | {"use": ["fix"]}],
     )
     assert survey.gyro["heading_deg"].tolist() == [0.0, 10.0]
-    assert len(survey.navigation) == 21
+    assert len(survey.navigation) == 3  # the second source has nothing to say between fixes less than a minute apart
     assert survey.record["fix_ledger"] == {
-        "records": 21,
-        "kept": 21,
+        "records": 23,
+        "kept": 3,
         "repeated": 0,
         "contradictory": 0,
-        "second_choice": 0,
+        "second_choice": 20,
     }
+    assert "20 fixes of later sources are not used: an earlier source tells that time." in survey.record["notes"]
+    assert "nav.csv: the time of the fixes goes back 1 times, first in row 5; put in order." in survey.record["notes"]
     assert survey.record["navigation_files"][0]["counts"]["without position"] == 1
 
 
