@@ -95,7 +95,7 @@ class Process:
     rough: bool = False
     size: str = ""
     expected: float = 0.0
-    spread: float = 2.0
+    spread: float = 2.5
 
 
 @dataclass(frozen=True)
@@ -355,13 +355,24 @@ def estimate_variances(blocks: list[Block], kept: list[np.ndarray], model: Model
     return replace(model, log_variance=log_variance)
 
 
-def left_out_figure(blocks: list[Block], kept: list[np.ndarray], model: Model) -> float:
-    """Return the leave-one-out figure in nT: the rms of what the others leave of each mismatch."""
-    errors = []
+def left_out_figure(blocks: list[Block], kept: list[np.ndarray], model: Model) -> tuple[float, float]:
+    """Return how well crossings are predicted by the others, in nT: the figure that decides on terms, and the rms.
+
+    With e what the others leave of a mismatch and v its variance as the model has it, the figure is
+    ``exp(mean(log v + e^2 / v - 1) / 2)``, the logarithmic score of the predictions (Good 1952, *J. R. Statist. Soc. B*
+    14) as a length: it is the rms of e where the variances are alike and right, and larger where the model claims to
+    know more, or less, than it does.
+    """
+    errors, variances = [np.empty(0)], [np.empty(0)]
     for block, keep in zip(blocks, kept, strict=True):
         v = block.covariance(model, np.where(keep, 1.0, FLOOR))
-        errors.append(left_out(v, block.crossings.mismatch)[0][keep])
-    return float(np.sqrt(np.mean(np.concatenate(errors) ** 2))) if any(map(len, errors)) else np.nan
+        error, variance = left_out(v, block.crossings.mismatch)
+        errors.append(error[keep])
+        variances.append(variance[keep])
+    e, v = np.concatenate(errors), np.concatenate(variances)
+    if not len(e):
+        return np.nan, np.nan
+    return float(np.exp(np.mean(np.log(v) + e**2 / v - 1) / 2)), float(np.sqrt(np.mean(e**2)))
 
 
 def choose_terms(
@@ -384,26 +395,29 @@ def choose_terms(
     Model
         With the terms that stay, variances estimated anew.
     list of dict
-        For each term, last round first decided: ``term``, ``left_out_with_nt``, ``left_out_without_nt``, ``kept``.
+        For each term, as last looked at: ``term``, ``kept``, ``left_out_with_nt`` and ``left_out_without_nt`` (the
+        figure that decides), ``rms_left_out_with_nt`` and ``rms_left_out_without_nt``.
 
     """
     waiting, said = list(optional), {}
-    figure = left_out_figure(blocks, kept, model)
+    figure, rms = left_out_figure(blocks, kept, model)
     while waiting:
         trials = []
         for term in waiting:
             smaller = estimate_variances(blocks, kept, model.without(term), iterations=6)
-            trials.append((left_out_figure(blocks, kept, smaller), term, smaller))
-        for other, term, _ in trials:
+            trials.append((*left_out_figure(blocks, kept, smaller), term, smaller))
+        for other, other_rms, term, _ in trials:
             said[term] = {
                 "term": term,
+                "kept": bool(other > figure),
                 "left_out_with_nt": figure,
                 "left_out_without_nt": other,
-                "kept": bool(other > figure),
+                "rms_left_out_with_nt": rms,
+                "rms_left_out_without_nt": other_rms,
             }
-        best, term, smaller = min(trials, key=lambda trial: (trial[0], optional.index(trial[1])))
+        best, best_rms, term, smaller = min(trials, key=lambda trial: (trial[0], optional.index(trial[2])))
         if not best <= figure:
             break
-        model, figure = smaller, best
+        model, figure, rms = smaller, best, best_rms
         waiting.remove(term)
     return model, [said[term] for term in optional if term in said]

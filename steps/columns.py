@@ -121,6 +121,9 @@ COLUMNS = {
     "level_flags": Column("1", "uint32", "flags set by levelling"),
     "heading_change_nt": Column("nT", "float64", "change of the heading term by the joint adjustment; add to it"),
     "diurnal_change_nt": Column("nT", "float64", "change of the diurnal term by the joint adjustment; add to it"),
+    "sigma_position_left_m": Column(
+        "m", "float64", "horizontal position error left where an error of the layback is corrected for in the level term"
+    ),
     "position_change_nt": Column("nT", "float64", "part of the level term that undoes errors of layback and clock"),
     "sigma_joint_nt": Column(
         "nT", "float64", "one sigma of diurnal, heading and level terms together after the adjustment, datum left out"
@@ -227,6 +230,7 @@ TABLES = {
         "position_change_nt",
         "sigma_joint_nt",
         "sigma_datum_nt",
+        "sigma_position_left_m",
         "level_flags",
     ],
     "levelling_lines": [

@@ -18,6 +18,7 @@ SIGNIFICANT = 3.0  # standard errors
 SAME_HEADING_DEG = 12.0
 WEAK = 1e-3  # of the largest eigenvalue of the normal matrix of constants and trends
 LINES_LOOKED_AT = 300  # for weak modes
+BROUGHT = ("left_out_with_nt", "left_out_without_nt", "rms_left_out_with_nt", "rms_left_out_without_nt")
 NAMES = ("C1", "S1", "C2", "S2")
 
 
@@ -272,7 +273,8 @@ def weak_modes(first: np.ndarray, second: np.ndarray, share: np.ndarray, place: 
     for line, part in ((one, share[:, 0]), (two, share[:, 1])):
         values += (weak[line] + part[:, None] * weak[m + line]) / 2
     x, y = ((place - place.mean(axis=0)) / np.maximum(np.abs(place - place.mean(axis=0)).max(axis=0), 1e-12)).T
-    surface = np.column_stack([np.ones(n), x, y, x * y])
+    # a twist along lines of any azimuth is a sum of these
+    surface = np.column_stack([np.ones(n), x, y, x * y, x**2, y**2])
     basis, strength, _ = np.linalg.svd(values, full_matrices=False)
     basis = basis[:, strength > 1e-6 * max(strength[0], 1e-12)]
     # principal angles between what the modes can do and the surfaces
@@ -354,10 +356,8 @@ def _about_terms(levels) -> tuple[list[dict], list[dict]]:
     tried = {trial["term"]: trial for trial in levels.fit.trials}
     terms = []
     for term in joint.TERMS:
-        row = {"term": term, "kept": term in kept, "left_out_with_nt": None, "left_out_without_nt": None}
-        if term in tried:
-            row |= {key: _number(tried[term][key]) for key in ("left_out_with_nt", "left_out_without_nt")}
-        terms.append(row)
+        brought = {key: _number(tried[term][key]) if term in tried else None for key in BROUGHT}
+        terms.append({"term": term, "kept": term in kept, **brought})
     sizes = np.exp(model.log_variance / 2)
     processes = [
         {

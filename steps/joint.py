@@ -424,7 +424,7 @@ def make_model(
             for k, hours in enumerate(scales_h):
                 rough = k == 0 and kind == "without_base"  # storms and bays; what a base leaves of them is smoother
                 name = f"{label}, {hours:g} h"
-                processes.append(Process(name, "time_drift", "time", hours, rough, kind, share, 1.5))
+                processes.append(Process(name, "time_drift", "time", hours, rough, kind, share, 2.0))
     noise_prior = np.array([[0.0, 0.7], [0.0, 1.0], [2 * np.log(max(0.3 * own, 1e-4)), 1.5]])
     prior = prior.copy()
     for term, columns in EFFECTS_OF.items():

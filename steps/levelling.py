@@ -18,7 +18,7 @@ import numpy as np
 import pandas as pd
 
 from steps import adjustment, determined, edits, joint, stage
-from steps.collocation import EFFECTS, EFFECTS_OF, Crossings, Points
+from steps.collocation import EFFECTS, EFFECTS_OF, Crossings
 from steps.errors import SurveyError, mistake
 from steps.joint import PASSES, Nodes
 from steps.levels import Levels, at_readings, line_numbers, line_statistics, write_covariance
@@ -176,7 +176,8 @@ def level(
     # what the calibration expects is taken out, so that all coefficients are expected to be zero
     expected = joint.heading_of(one, heading_mean) - joint.heading_of(two, heading_mean)
     expected = expected * (settings.heading != "off")
-    parts = joint.crossing_parts(crossings.iloc[rows], _navigation_share(positions, settings, one, two))
+    share = navigation_share(positions, len(surveys), settings)
+    parts = joint.crossing_parts(crossings.iloc[rows], (share[one.survey] + share[two.survey]) / 2)
     data = Crossings(mismatch - expected, parts, one, two)
     prior = np.zeros((len(surveys), len(EFFECTS), len(EFFECTS)))
     prior[:, :4, :4] = heading_covariance
@@ -251,17 +252,17 @@ def _with_results(crossings, rows, sign, posterior, first, second, m) -> pd.Data
     return crossings.assign(residual_nt=residual, left_out_nt=left_out, weight=weight, status=status)
 
 
-def _navigation_share(positions, settings, one: Points, two: Points) -> np.ndarray:
-    """Return the part of the variance of positions that is not the layback's, where that is modelled."""
-    share = np.ones(int(max(one.survey.max(), two.survey.max())) + 1)
+def navigation_share(positions: list[dict] | None, surveys: int, settings: Levelling) -> np.ndarray:
+    """Return the part of the variance of positions that is not the layback's, of each survey; 1 where not modelled."""
+    share = np.ones(surveys)
     if settings.layback == "off" and "layback" not in settings.apply:
-        return share[one.survey]
-    for s, record in enumerate((positions or [])[: len(share)]):
+        return share
+    for s, record in enumerate((positions or [])[:surveys]):
         own = record.get("settings", {})
         if own and own.get("layback", {}).get("model") != "none":
             fix, tow = own["sigma_navigation_m"] ** 2, own["sigma_layback_m"] ** 2
             share[s] = fix / (fix + tow)
-    return (share[one.survey] + share[two.survey]) / 2
+    return share
 
 
 def read_survey(job: stage.Job, number: int, tow: bool) -> dict[str, np.ndarray]:
@@ -270,7 +271,7 @@ def read_survey(job: stage.Job, number: int, tow: bool) -> dict[str, np.ndarray]
     Returns
     -------
     dict of str to array
-        line_index, time_utc, effects (n, 7), sigma_diurnal_nt, sigma_heading_nt.
+        line_index, time_utc, effects (n, 7), sigma_diurnal_nt, sigma_heading_nt, sigma_position_m.
 
     """
 
@@ -281,7 +282,7 @@ def read_survey(job: stage.Job, number: int, tow: bool) -> dict[str, np.ndarray]
     (line_index,), (time_utc,) = column("lines", "line_index"), column("readings", "time_utc")
     diurnal, sigma_diurnal = column("diurnal", "diurnal_nt", "sigma_diurnal_nt")
     heading, sigma_heading = column("heading", "heading_nt", "sigma_heading_nt")
-    direction, ship = column("position", "tow_direction_deg", "ship_heading_deg")
+    direction, ship, error = column("position", "tow_direction_deg", "ship_heading_deg", "sigma_position_m")
     effects = np.full((len(line_index), len(EFFECTS)), np.nan)
     effects[:, :4] = joint.harmonics(direction if tow else ship)
     effects[:, 4] = diurnal
@@ -303,6 +304,7 @@ def read_survey(job: stage.Job, number: int, tow: bool) -> dict[str, np.ndarray]
         "effects": effects,
         "sigma_diurnal_nt": sigma_diurnal,
         "sigma_heading_nt": sigma_heading,
+        "sigma_position_m": error,
     }
 
 
@@ -377,6 +379,9 @@ def main(job: stage.Job) -> None:
     for key, k in zip(members, range(len(members)), strict=True):
         s = keys.index(key) if key in keys else -1
         readings = read_survey(job, k, s >= 0 and tow[s])
+        if s >= 0 and "layback" in job.settings.apply:  # its part of the error is now in the joint sigma
+            share = navigation_share(records[1], len(keys), job.settings)[s]
+            readings["sigma_position_m"] = readings["sigma_position_m"] * np.sqrt(share)
         job.write("levelling", at_readings(levels, s, settings=job.settings, **readings), member=key)
     statistics = line_statistics(levels, held)
     job.write("levelling_lines", statistics)

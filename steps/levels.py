@@ -126,6 +126,7 @@ def at_readings(
     effects: np.ndarray | None = None,
     sigma_diurnal_nt: np.ndarray | None = None,
     sigma_heading_nt: np.ndarray | None = None,
+    sigma_position_m: np.ndarray | None = None,
     settings: Levelling,
 ) -> pd.DataFrame:
     """Take the corrections to the readings of one survey.
@@ -142,6 +143,8 @@ def at_readings(
         What a unit of each coefficient adds to the anomaly of each reading; NaN where unknown.
     sigma_diurnal_nt, sigma_heading_nt : array, shape (n,), optional
         Of the earlier stages; used where levelling does not adjust those terms.
+    sigma_position_m : array, shape (n,), optional
+        Position error that no correction made here has taken away.
     settings : Levelling
 
     Returns
@@ -150,7 +153,7 @@ def at_readings(
         level_nt (subtracted), sigma_level_nt, heading_change_nt and diurnal_change_nt (to be added to those terms; NaN
         where they stay as they are), position_change_nt (what an applied error of layback or clock does to the anomaly
         at the position given; part of level_nt), sigma_joint_nt (of diurnal, heading and level together),
-        sigma_datum_nt, level_flags.
+        sigma_datum_nt, sigma_position_left_m, level_flags.
 
     """
     n = len(line_index)
@@ -159,6 +162,8 @@ def at_readings(
     on = np.flatnonzero(line_index >= 0)
     line[on] = own.index.to_numpy()[line_index[on]]
     found = {name: np.full(n, np.nan) for name in LEVELLING if name != "level_flags"}
+    if sigma_position_m is not None:
+        found["sigma_position_left_m"] = sigma_position_m
     if levels.posterior is not None and len(on):
         p, where = levels.posterior, line[on]
         network = levels.network[where]

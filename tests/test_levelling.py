@@ -304,6 +304,7 @@ def test_drift_lowers_the_left_out_figure_when_lines_drift():
     assert figures[1] < 0.5 * figures[0]
     record, notes, _ = sum_up(drift)
     assert record["weak_modes"]["modes"] == 4, "1, x, y and x y: handbook, section 7"
+    assert record["weak_modes"]["surfaces"] == 4
     assert any("leave 4 combinations undetermined" in note for note in notes)
 
 
@@ -466,14 +467,14 @@ def drawn_errors(seed):
 
 
 def test_sigmas_are_those_of_many_simulated_surveys():
-    """Gauss: (level - truth) / sigma has unit spread, datum left out, over 40 surveys with all causes drawn anew."""
+    """Gauss: (level - truth) / sigma has unit spread, datum left out, over 24 surveys with all causes drawn anew."""
     ratio = []
     lines = make_lines(8, 4)
     ordered = levelling.in_order(lines)
     settings = Levelling(**OFF | {"time_drift": "on", "heading": "on"})
     nodes = levelling.nodes_of(ordered, settings)
     hours = (nodes.time_utc - START) / HOUR
-    for seed in range(40):
+    for seed in range(24):
         error, coefficients = drawn_errors(seed)
 
         def all_error(k, h, own, error=error, coefficients=coefficients):
@@ -555,6 +556,7 @@ def run_stage(folder, crossings, surveys, settings=None, edits=(), heading=None)
                 "ship_heading_deg": direction,
                 "sensor_course_deg": direction,
                 "sensor_speed_mps": np.full(n, 5.0),
+                "sigma_position_m": np.full(n, 5.0),
             },
             "diurnal": {"diurnal_nt": np.zeros(n), "sigma_diurnal_nt": np.ones(n)},
             "heading": {"heading_nt": np.zeros(n), "sigma_heading_nt": np.zeros(n)},
@@ -565,7 +567,8 @@ def run_stage(folder, crossings, surveys, settings=None, edits=(), heading=None)
             table = pd.DataFrame(content, index=None if isinstance(content, pd.DataFrame) else range(n))
             table.to_parquet(place / f"{name}.parquet", index=False)
             words.setdefault(name, []).append(str(place / f"{name}.parquet"))
-        for name, content in (("heading_record", heading or {}), ("position_record", {})):
+        stated = {"settings": {"layback": {"model": "pursuit"}, "sigma_navigation_m": 3.0, "sigma_layback_m": 4.0}}
+        for name, content in (("heading_record", heading or {}), ("position_record", stated)):
             (place / f"{name}.json").write_text(json.dumps(content))
             words.setdefault(name, []).append(str(place / f"{name}.json"))
         outputs.append(place / "levelling.parquet")
@@ -623,6 +626,7 @@ def test_the_stage_applies_an_error_of_position_on_request(tmp_path):
     table = pd.read_parquet(tmp_path / "one" / "levelling.parquet")
     assert table["position_change_nt"].abs().max() < 1e-6, "a field without gradient is not changed"
     assert table["position_change_nt"].notna().all()
+    assert table["sigma_position_left_m"].to_numpy() == pytest.approx(3.0), "of 5 m, 4 m were the layback's"
 
 
 def test_the_stage_tells_a_wrong_edit_in_one_sentence(tmp_path):
