@@ -49,7 +49,7 @@ def join_readings(parts: list[pd.DataFrame]) -> tuple[pd.DataFrame, pd.DataFrame
         stands; ``contradicts``, whether any quantity of both differs.
 
     """
-    table = pd.concat(parts, ignore_index=True)
+    table = parts[0].copy() if len(parts) == 1 else pd.concat(parts, ignore_index=True)
     for name in QUANTITIES:
         if name not in table:
             table[name] = np.nan
@@ -373,44 +373,62 @@ def _text(instant, unit: str = "s") -> str:
 
 def main(job: stage.Job) -> None:
     """Read every raw file, put readings, fixes and headings in order, and balance the books."""
+    time = _ingest_readings(job)  # written and let go of before the navigation is read
+    _ingest_navigation(job, time)
+    kept, records = job.record["ledger"]["kept"], job.record["ledger"]["records"]
+    job.done(
+        f"{kept} readings of {records} records in {len(job.record['files'])} files ({records - kept} dropped), "
+        f"{job.record['fixes']} fixes, {job.record['headings']} headings"
+    )
+
+
+def _ingest_readings(job: stage.Job) -> np.ndarray:
+    """Read, join, account for and write the readings; return their times, in order."""
     parts, files = read_readings(job.settings.readings, job.inputs["readings"])
     names = [file["file"] for file in files]
     joined = pd.concat(parts, ignore_index=True)
+    del parts
     check_readings(joined, names)
-    joined = shift_clocks(joined, job.edits, names)
+    if job.edits:
+        joined = shift_clocks(joined, job.edits, names)
     readings, left_out = join_readings([joined])
     ledger = _ledger(files, readings, left_out)
     check_stamps(left_out, len(readings))
-    fixes, headings, navigation_files = read_navigation(job.settings.navigation, job.inputs)
-    navigation, fix_counts = join_navigation(fixes, POSITION)
-    gyro, heading_counts = join_navigation(headings, ["heading_deg"])
-    check_overlap(readings["time_utc"].to_numpy(), navigation["time_utc"].to_numpy())
     job.write("readings", readings)
-    job.write("navigation", navigation)
-    job.write("gyro", gyro)
     shared = overlaps(files)
     job.record |= {
         "ledger": ledger,
         "backwards": len(backward_steps(joined)) + sum(file["counts"].get("backwards", 0) for file in files),
         "overlaps": shared,
         "files": files,
-        "navigation_files": navigation_files,
-        "fixes": len(navigation),
-        "fix_ledger": _balanced("fixes", sum(map(len, fixes)), len(navigation), fix_counts),
-        "headings": len(gyro),
-        "heading_ledger": _balanced("headings", sum(map(len, headings)), len(gyro), heading_counts),
     }
-    for sentence in [
-        *_notes_on_readings(joined, readings, left_out, names, shared),
-        *_notes_on_navigation(readings["time_utc"].to_numpy(), navigation, gyro, job.record["fix_ledger"]),
-        *_notes_of_files(navigation_files),
-    ]:
+    for sentence in _notes_on_readings(joined, readings, left_out, names, shared):
         job.note(sentence)
-    dropped = ledger["records"] - len(readings)
-    job.done(
-        f"{len(readings)} readings of {ledger['records']} records in {len(files)} files ({dropped} dropped), "
-        f"{len(navigation)} fixes, {len(gyro)} headings"
-    )
+    return readings["time_utc"].to_numpy()
+
+
+def _ingest_navigation(job: stage.Job, time: np.ndarray) -> None:
+    """Read, join, account for and write fixes and headings; hold them against the times of the readings."""
+    fixes, headings, files = read_navigation(job.settings.navigation, job.inputs)
+    gyro, heading_counts = join_navigation(headings, ["heading_deg"])
+    heading_ledger = _balanced("headings", sum(map(len, headings)), len(gyro), heading_counts)
+    job.write("gyro", gyro)
+    headings, gyro = [], len(gyro)
+    navigation, fix_counts = join_navigation(fixes, POSITION)
+    fix_ledger = _balanced("fixes", sum(map(len, fixes)), len(navigation), fix_counts)
+    check_overlap(time, navigation["time_utc"].to_numpy())
+    job.write("navigation", navigation)
+    job.record |= {
+        "navigation_files": files,
+        "fixes": len(navigation),
+        "fix_ledger": fix_ledger,
+        "headings": gyro,
+        "heading_ledger": heading_ledger,
+    }
+    for sentence in _notes_on_navigation(time, navigation["time_utc"].to_numpy(), gyro, fix_ledger):
+        job.note(sentence)
+    for sentence in _notes_of_files(files):
+        job.note(sentence)
 
 
 def _ledger(files: list[dict], readings: pd.DataFrame, left_out: pd.DataFrame) -> dict[str, int]:
@@ -535,9 +553,9 @@ def _silences(what: str, time: np.ndarray) -> list[str]:
     ]
 
 
-def _notes_on_navigation(time, navigation, gyro, ledger) -> list[str]:
-    """Say what deserves a look in navigation and gyro."""
-    notes, fixes = [], navigation["time_utc"].to_numpy()
+def _notes_on_navigation(time, fixes, headings: int, ledger) -> list[str]:
+    """Say what deserves a look in navigation and gyro, by the times of readings and fixes."""
+    notes = []
     outside = np.count_nonzero((time < fixes[0]) | (time > fixes[-1]))
     if outside:
         notes.append(f"{outside} readings lie before the first or after the last fix.")
@@ -549,7 +567,7 @@ def _notes_on_navigation(time, navigation, gyro, ledger) -> list[str]:
         )
     first, last = np.searchsorted(fixes, [time[0], time[-1]])
     notes += _silences("navigation", fixes[max(first - 1, 0) : last + 1])
-    if len(gyro) == 0:
+    if headings == 0:
         notes.append("there is no gyro heading: course over ground will stand for it.")
     return notes
 

@@ -79,27 +79,38 @@ def read_nmea(path: str | Path, stamp: str = "sentence") -> Log:
         If the file is empty or holds no sentence, holds positions but no date, or no stamps where they are wanted.
 
     """
-    return parse_nmea(read_bytes(path), str(path), stamp)
+    lines = _read_lines(read_bytes(path), str(path))  # the text itself is let go of
+    return _make_log(lines, str(path), stamp)
 
 
 def parse_nmea(data: bytes, where: str = "NMEA 0183", stamp: str = "sentence") -> Log:
     """Parse the bytes of a log; see `read_nmea`."""
+    return _make_log(_read_lines(data, where), where, stamp)
+
+
+def _read_lines(data: bytes, where: str) -> Part:
+    """Take all lines of a log apart."""
     if not data[:999].strip() and not data.strip():
         raise SurveyError(mistake(where, "must hold NMEA 0183 sentences", "an empty file"))
     if b"\n" not in data and b"\r" in data:
         data = data.replace(b"\r", b"\n")
-    log = _put_together(list(_in_turn(take_apart, blocks(data))))
-    counts, s = log.counts, log.values
+    lines = _put_together(list(_in_turn(take_apart, blocks(data))))
+    counts = lines.counts
     if counts["lines"] == counts.get("blank", 0) + counts.get("no sentence", 0) + counts.get("malformed", 0):
         first = data.lstrip()[:60].split(b"\n")[0].decode("ascii", "replace")
         remedy = "Is this the right file?"
         raise SurveyError(mistake(where, "must hold NMEA 0183 sentences such as $GPGGA,...", first, remedy))
-    counts |= _by_name(log.skipped)
+    return lines
+
+
+def _make_log(lines: Part, where: str, stamp: str) -> Log:
+    """Give the sentences of a log their times and make fixes and headings of them."""
+    counts, s = lines.counts | _by_name(lines.skipped), lines.values
     notes: list[str] = []
     time, late = _times(s, where, stamp, notes)
     fixes = _fixes(s, time, stamp, counts)
     headings = _headings(s, late, counts)
-    _judge(log, fixes, notes)
+    _judge(lines, fixes, notes)
     return Log(fixes, headings, {name: number for name, number in counts.items() if number}, notes)
 
 
