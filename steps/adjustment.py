@@ -290,6 +290,8 @@ class _System:
         """Return the posterior covariance of x."""
         from scipy.linalg.lapack import dpotri
 
+        if not self._size:
+            return np.empty((0, 0))
         factor, _ = self._factor(precision)
         inverse, _ = dpotri(factor, lower=1, overwrite_c=1)
         for first in range(0, self._size, 512):  # the upper triangle, without a second matrix

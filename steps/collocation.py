@@ -265,6 +265,8 @@ def left_out(covariance: np.ndarray, mismatch: np.ndarray) -> tuple[np.ndarray, 
 def _inverse(matrix: np.ndarray) -> np.ndarray:
     from scipy.linalg.lapack import dpotrf, dpotri
 
+    if not len(matrix):
+        return matrix
     factor, bad = dpotrf(matrix, lower=1)
     if bad:  # rounding alone: V has the noise on its diagonal
         factor, _ = dpotrf(matrix + 1e-10 * np.trace(matrix) / len(matrix) * np.eye(len(matrix)), lower=1)
@@ -372,7 +374,8 @@ def left_out_figure(blocks: list[Block], kept: list[np.ndarray], model: Model) -
     e, v = np.concatenate(errors), np.concatenate(variances)
     if not len(e):
         return np.nan, np.nan
-    return float(np.exp(np.mean(np.log(v) + e**2 / v - 1) / 2)), float(np.sqrt(np.mean(e**2)))
+    score = np.mean(np.log(v) + e**2 / v - 1) / 2
+    return float(np.exp(min(score, 50.0))), float(np.sqrt(np.mean(e**2)))  # 50: nothing fits at all
 
 
 def choose_terms(

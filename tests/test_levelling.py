@@ -41,7 +41,7 @@ def course(lines, k):
     return (90.0 if lines["kind"][k] == "line" else 0.0) + (180.0 if own % 2 else 0.0)
 
 
-def make_crossings(lines, pairs, error, noise=0.0, seed=0, place=None, gradient=0.02, courses=course):
+def make_crossings(lines, pairs, error, noise=0.0, seed=0, place=None, gradient=0.02, courses=course, speed=5.0):
     """Make crossings of pairs (a, b). `error(k, hours, pass)` is what readings of line k have too much.
 
     `pass` holds course_deg, gradient_nt_per_m, speed_mps and diurnal_nt. Lines lie in a grid: line k crosses tie j at
@@ -64,7 +64,7 @@ def make_crossings(lines, pairs, error, noise=0.0, seed=0, place=None, gradient=
             own = {
                 "course_deg": courses(lines, k),
                 "gradient_nt_per_m": gradient * rng.standard_normal(),
-                "speed_mps": 5.0,
+                "speed_mps": speed if np.isscalar(speed) else speed[k],
                 "diurnal_nt": 20 * np.sin(2 * np.pi * hours / 24),
             }
             row |= {f"{name.replace('_', f'_{p}_', 1)}": value for name, value in own.items()}
@@ -373,6 +373,23 @@ def test_layback_and_clock_are_estimated_with_their_sign_and_not_told_apart_at_o
     assert not found.applied[5:].any()
 
 
+def test_speed_changes_let_layback_and_clock_be_told_apart():
+    lines = make_lines(12, 6)
+
+    def error(k, hours, own):
+        return own["gradient_nt_per_m"] * (own["speed_mps"] * 3.0 - 20.0)
+
+    speeds = np.where(np.arange(18) % 2, 3.0, 7.0)
+    crossings = make_crossings(lines, grid(12, 6), error, noise=0.05, gradient=0.03, speed=speeds)
+    record, notes, _ = sum_up(level(crossings, lines, Levelling()))
+    advice = record["surveys"]["one"]["position_advice"]
+    assert advice["told_apart"]
+    assert advice["both_layback_m"] == pytest.approx(20.0, abs=3 * advice["both_sigma_layback_m"])
+    assert advice["both_clock_s"] == pytest.approx(3.0, abs=3 * advice["both_sigma_clock_s"])
+    assert advice["both_sigma_clock_s"] < 0.5
+    assert any("the speed varies enough to tell them apart" in note for note in notes)
+
+
 def test_an_error_of_position_is_applied_on_request():
     lines = make_lines(10, 5)
     crossings = make_crossings(
@@ -506,6 +523,58 @@ def test_too_little_to_level_runs_to_the_end(pairs):
     if not pairs:
         assert notes[0].startswith("there is no usable crossing: no line can be levelled")
         assert done == "no line levelled"
+
+
+@pytest.mark.parametrize("seed", range(40))
+def test_any_net_ends_in_a_level_with_a_sigma_or_in_a_flag(seed):
+    """Random small nets with wild values, missing columns, odd settings: never an exception, never NaN without flag."""
+    rng = np.random.default_rng(seed)
+    parts = [
+        make_lines(
+            int(rng.integers(1, 6)), int(rng.integers(0, 4)), f"s{k}", START + k * int(rng.integers(0, 99)) * HOUR
+        )
+        for k in range(int(rng.choice([1, 1, 2])))
+    ]
+    lines = pd.concat(parts, ignore_index=True)
+    m = len(lines)
+    n = int(rng.choice([0, 1, 2, 5, 20, 60])) if m > 1 else 0
+    pairs = [tuple(rng.choice(m, 2, replace=bool(rng.random() < 0.2))) for _ in range(n)]
+    size, wild = 10 ** rng.uniform(-3, 4), rng.choice([0.0, 1e4])
+    crossings = make_crossings(
+        lines,
+        pairs,
+        lambda k, h, p: size * np.sin(7 * k) + wild * (rng.random() < 0.1),
+        noise=float(10 ** rng.uniform(-4, 2)),
+        seed=seed,
+        place=lambda k, other, own: own.uniform(),
+        gradient=float(rng.choice([0, 0.01, 1])),
+    )
+    numeric = [name for name in crossings if crossings[name].dtype == float]
+    for name in rng.choice(numeric, rng.integers(0, 4)) if n else []:
+        crossings.loc[rng.random(n) < rng.choice([0.1, 1.0]), name] = rng.choice([np.nan, 0.0, 1e6])
+    terms = {name: str(rng.choice(["auto", "on", "off"])) for name in OFF}
+    apply = rng.choice(["layback", "clock"], int(rng.integers(0, 3)), replace=False).tolist()
+    settings = Levelling(
+        **terms, apply=apply, robust=bool(rng.random() < 0.8), knots_h=float(rng.choice([0.05, 0.25, 5]))
+    )
+    held = rng.random(m) < rng.choice([0, 0, 0.3, 1])
+    found = level(crossings, lines, settings, held=held, line_means=rng.standard_normal((m, 7)))
+    record, notes, done = levelling.determined.sum_up(found, levels.line_statistics(found, held), settings)
+    json.dumps(record, allow_nan=False)
+    assert done
+    for s in range(len(found.surveys)):
+        own = found.lines[found.lines["survey_number"] == s].sort_values("row")
+        index = np.repeat(np.arange(len(own)), 3)
+        time = np.concatenate(
+            [pd.date_range(a, b, periods=3) for a, b in zip(own["start_utc"], own["end_utc"], strict=True)]
+        )
+        effects = rng.standard_normal((len(index), 7))
+        at = levels.at_readings(found, s, index, time, effects=effects, settings=settings)
+        there = at["level_nt"].notna()
+        assert (there == (at["level_flags"] == 0)).all()
+        assert np.isfinite(at.loc[there, ["sigma_level_nt", "sigma_joint_nt"]]).all(axis=None)
+        if not there.all():
+            assert notes, "a level is missing, and nothing was said"
 
 
 def test_readings_get_the_level_at_their_time_and_a_flag_where_there_is_none():
