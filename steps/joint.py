@@ -62,8 +62,9 @@ class Nodes:
             Place between it and the next node of the line, 0 to 1.
 
         """
-        starts = np.searchsorted(self.line, line)
-        stops = np.searchsorted(self.line, line, side="right")
+        lines = np.arange(int(self.line[-1]) + 2 if len(self) else 1)
+        edges = np.searchsorted(self.line, lines)
+        starts, stops = edges[line], edges[line + 1]
         times, wanted = self.time_utc.astype("int64"), np.asarray(time_utc, "datetime64[ns]").astype("int64")
         # nodes of a line are evenly spaced, so the place follows from its first and last one
         begin, end, gaps = times[starts], times[stops - 1], np.maximum(stops - starts - 1, 0)

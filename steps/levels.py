@@ -80,9 +80,34 @@ def rms(values) -> float | None:
     return float(np.sqrt(np.mean(values**2))) if len(values) else None
 
 
-def _datum_of(levels: Levels, line: np.ndarray) -> np.ndarray:
+@dataclass(frozen=True)
+class _Place:
+    """Instants between the nodes: the nodes beside them, the place between, and what their lines share."""
+
+    first: np.ndarray
+    following: np.ndarray
+    share: np.ndarray
+    network: np.ndarray  # 0 also where there is none
+    levelled: np.ndarray
+    loose: np.ndarray
+
+    def between(self, values: np.ndarray) -> np.ndarray:
+        """Interpolate values at the nodes."""
+        share = self.share[:, None] if values.ndim > 1 else self.share
+        return values[self.first] * (1 - share) + values[self.following] * share
+
+    def variance(self, variance: np.ndarray, covariance: np.ndarray) -> np.ndarray:
+        """Interpolate a variance at the nodes, the covariance of neighbours included."""
+        share, other = self.share, 1 - self.share
+        found = other**2 * variance[self.first] + share**2 * variance[self.following]
+        return found + 2 * share * other * covariance[self.first]
+
+
+def _place(levels: Levels, line: np.ndarray, time_utc: np.ndarray) -> _Place:
+    first, share = levels.nodes.between(line, time_utc)
+    following = np.minimum(first + (share > 0), len(levels.nodes) - 1)
     network = levels.network[line]
-    return np.where(network >= 0, levels.posterior.datum[np.maximum(network, 0)], np.nan)
+    return _Place(first, following, share, np.maximum(network, 0), network >= 0, levels.points.loose[first])
 
 
 def level_at(levels: Levels, line: np.ndarray, time_utc: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
@@ -98,23 +123,15 @@ def level_at(levels: Levels, line: np.ndarray, time_utc: np.ndarray) -> tuple[np
     """
     if levels.posterior is None:
         return np.full(len(line), np.nan), np.full(len(line), np.nan)
-    p = levels.posterior
-    first, share = levels.nodes.between(line, time_utc)
-    following = np.minimum(first + (share > 0), len(levels.nodes) - 1)
-    network = levels.network[line]
-    loose = levels.points.loose[first]
-    value = (1 - share) * p.value[first] + share * p.value[following] - loose * _datum_of(levels, line)
-    variance = _between(p.variance, p.following, first, following, share)
-    with_datum = (1 - share) * p.datum_level_nodes[first] + share * p.datum_level_nodes[following]
-    variance = variance - 2 * with_datum + p.datum_level_variance[np.maximum(network, 0)]
-    sigma = np.sqrt(np.maximum(variance, 0.0)) * (loose > 0)
-    return np.where(network >= 0, value, np.nan), np.where(network >= 0, sigma, np.nan)
+    return _level_at(levels.posterior, _place(levels, line, time_utc))
 
 
-def _between(variance, covariance, first, following, share):
-    """Interpolate a variance between nodes, the covariance of neighbours included."""
-    other = 1 - share
-    return other**2 * variance[first] + share**2 * variance[following] + 2 * share * other * covariance[first]
+def _level_at(p: Posterior, at: _Place) -> tuple[np.ndarray, np.ndarray]:
+    value = at.between(p.value) - at.loose * p.datum[at.network]
+    variance = at.variance(p.variance, p.following) - 2 * at.between(p.datum_level_nodes)
+    variance += p.datum_level_variance[at.network]
+    sigma = np.sqrt(np.maximum(variance, 0.0)) * (at.loose > 0)
+    return np.where(at.levelled, value, np.nan), np.where(at.levelled, sigma, np.nan)
 
 
 def at_readings(
@@ -165,46 +182,43 @@ def at_readings(
     if sigma_position_m is not None:
         found["sigma_position_left_m"] = sigma_position_m
     if levels.posterior is not None and len(on):
-        p, where = levels.posterior, line[on]
-        network = levels.network[where]
-        value, found["sigma_level_nt"][on] = level_at(levels, where, time_utc[on])
-        given = np.full((n, len(EFFECTS)), np.nan) if effects is None else effects
-        loose = levels.points.loose[np.searchsorted(levels.nodes.line, where)]
+        p, at = levels.posterior, _place(levels, line[on], time_utc[on])
+        value, found["sigma_level_nt"][on] = _level_at(p, at)
+        used = np.flatnonzero(levels.applied)
+        own = np.full((len(on), len(used)), np.nan) if effects is None else effects[on][:, used]
         coefficients = p.effects[survey].copy()
-        coefficients[:4] += levels.heading_mean[survey] * levels.applied[0]
-        change = given[on] * coefficients * np.where(levels.applied, 1.0, np.nan) * loose[:, None]
-        found["heading_change_nt"][on] = change[:, :4].sum(axis=1)
-        found["diurnal_change_nt"][on] = change[:, 4]
-        shift = np.nan_to_num(change[:, 5:]).sum(axis=1)
-        found["position_change_nt"][on] = np.where(levels.applied[5:].any(), shift, np.nan)
+        coefficients[:4] += levels.heading_mean[survey]
+        change = own * coefficients[used] * at.loose[:, None]
+        for name, columns in (("heading", slice(0, 4)), ("diurnal", slice(4, 5)), ("position", slice(5, 7))):
+            mine = np.isin(used, np.arange(len(EFFECTS))[columns])
+            if mine.any():
+                found[f"{name}_change_nt"][on] = change[:, mine].sum(axis=1)
+        shift = np.nan_to_num(found["position_change_nt"][on])
+        found["position_change_nt"][on] = np.where(np.isin(used, (5, 6)).any(), shift, np.nan)
         found["level_nt"][on] = value + shift
-        found["sigma_datum_nt"][on] = np.where(network >= 0, p.datum_sigma[np.maximum(network, 0)], np.nan)
-        there = np.nan_to_num(given[on]) * levels.applied
-        variance = _joint_variance(levels, survey, where, time_utc[on], there, loose)
+        found["sigma_datum_nt"][on] = np.where(at.levelled, p.datum_sigma[at.network], np.nan)
+        variance = joint_variance(levels, survey, line[on], at, np.nan_to_num(own))
         for term, sigma in (("time_drift", sigma_diurnal_nt), ("heading", sigma_heading_nt)):
             if getattr(settings, term) == "off" and sigma is not None:
                 variance = variance + np.nan_to_num(sigma[on]) ** 2
-        found["sigma_joint_nt"][on] = np.where(network >= 0, np.sqrt(np.maximum(variance, 0.0)), np.nan)
+        found["sigma_joint_nt"][on] = np.where(at.levelled, np.sqrt(np.maximum(variance, 0.0)), np.nan)
     flags = np.where(np.isnan(found["level_nt"]), np.uint32(Flag.NO_LEVEL), np.uint32(0)).astype("uint32")
     return pd.DataFrame({**found, "level_flags": flags})[list(LEVELLING)]
 
 
-def _joint_variance(levels, survey, line, time_utc, effects, loose):
-    """Return the variance of level and changes together, the datum left out."""
+def joint_variance(levels: Levels, survey: int, line: np.ndarray, at: _Place, effects: np.ndarray) -> np.ndarray:
+    """Return the variance of level and changes together, the datum left out, in nT^2.
+
+    `effects` are those of the coefficients that are applied, shape (n, number of these).
+    """
     p = levels.posterior
-    first, share = levels.nodes.between(line, time_utc)
-    following = np.minimum(first + (share > 0), len(levels.nodes) - 1)
-    network = np.maximum(levels.network[line], 0)
     used = np.flatnonzero(levels.applied)
-    variance = _between(p.variance, p.following, first, following, share) + p.datum_variance[network]
-    variance -= 2 * ((1 - share) * p.datum_nodes[first] + share * p.datum_nodes[following])
-    for j in used:
-        variance += 2 * effects[:, j] * ((1 - share) * p.mixed[first, j] + share * p.mixed[following, j])
-        variance -= 2 * effects[:, j] * p.datum_effects[line, j]
-        for i in used:
-            variance += effects[:, i] * effects[:, j] * p.effects_covariance[survey, i, j]
-    neglected = (1 - share) * levels.neglected[first] + share * levels.neglected[following]
-    return (variance + neglected) * loose
+    variance = at.variance(p.variance, p.following) - 2 * at.between(p.datum_nodes) + p.datum_variance[at.network]
+    if len(used):
+        mixed = at.between(p.mixed[:, used]) - p.datum_effects[:, used][line]
+        own = p.effects_covariance[survey][np.ix_(used, used)]
+        variance += np.einsum("ni,ni->n", effects, 2 * mixed + effects @ own)
+    return (variance + at.between(levels.neglected)) * at.loose
 
 
 def line_statistics(levels: Levels, held: np.ndarray) -> pd.DataFrame:

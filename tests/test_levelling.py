@@ -464,7 +464,7 @@ def test_the_sparse_way_gives_what_collocation_gives(surveys, monkeypatch):
         assert np.median(sigma_2 / sigma) == pytest.approx(1.0, abs=0.03)
         assert other.posterior.effects == pytest.approx(found.posterior.effects, abs=0.3)
         a, b = (
-            levels._joint_variance(f, 0, line[:50], time[:50], effects[:50] * f.applied, np.ones(50))
+            levels.joint_variance(f, 0, line[:50], levels._place(f, line[:50], time[:50]), effects[:50][:, f.applied])
             for f in (found, other)
         )
         assert np.median(np.sqrt(b / a)) == pytest.approx(1.0, abs=0.05)
