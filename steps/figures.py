@@ -111,8 +111,8 @@ def _graticule(axes, plane: Plane) -> None:
         axes.plot(x, y, color="#bbbbbb", lw=0.5, zorder=0)
         at = np.argmin(np.abs(y - south))
         if west < x[at] < east:
-            wrapped = (lon + 180) % 360 - 180
-            label = f"{_degrees(abs(wrapped))}{'E' if wrapped >= 0 else 'W'}"
+            wrapped = round((lon + 180) % 360 - 180, 9)
+            label = f"{_degrees(abs(wrapped))}{'' if abs(wrapped) in (0, 180) else 'E' if wrapped > 0 else 'W'}"
             axes.annotate(
                 label,
                 (x[at], 0),
@@ -135,7 +135,7 @@ def _degrees(value: float) -> str:
 def _map_axes(height: float = 6.0):
     figure = Figure(figsize=(7.5, height), layout="constrained")
     axes = figure.add_subplot()
-    axes.set_aspect("equal", adjustable="datalim")
+    axes.set_aspect("equal", adjustable="box")
     axes.set_xlabel("km east")
     axes.set_ylabel("km north")
     return figure, axes
@@ -156,12 +156,13 @@ def track_map(samples: pd.DataFrame, crossings: pd.DataFrame, plane: Plane) -> F
     """
     figure, axes = _map_axes()
     labelled = set()
+    fine = float(np.clip(20 / max(1, samples["line"].nunique()), 0.3, 1.0))  # many lines are drawn thin
     for (name, kind), group in samples.groupby(["line", "kind"], sort=False):
         x, y = plane(group["sensor_latitude_deg"].to_numpy(), group["sensor_longitude_deg"].to_numpy())
         keep = np.unique(np.linspace(0, len(x) - 1, min(len(x), POINTS)).astype(int))
         label = kind if kind not in labelled else None
         labelled.add(kind)
-        axes.plot(x[keep], y[keep], color=KIND_COLOURS.get(kind, GREY), lw=0.9, label=label)
+        axes.plot(x[keep], y[keep], color=KIND_COLOURS.get(kind, GREY), lw=0.9 * fine, label=label)
         if samples["line"].nunique() <= 40:
             axes.annotate(_short(name), (x[0], y[0]), (2, 2), textcoords="offset points", fontsize=7, color="#333333")
     if len(crossings):
@@ -177,7 +178,7 @@ def track_map(samples: pd.DataFrame, crossings: pd.DataFrame, plane: Plane) -> F
                 x[used],
                 y[used],
                 c=value[used],
-                s=22,
+                s=22 * fine,
                 cmap="PuOr",
                 vmin=-limit,
                 vmax=limit,
@@ -263,7 +264,7 @@ def stacked_profiles(samples: pd.DataFrame, plane: Plane, nt_per_km: float | Non
             normal = -normal
         wx, wy = x + normal[0] * value / nt_per_km, y + normal[1] * value / nt_per_km
         axes.plot(x, y, color="#999999", lw=0.4)
-        axes.plot(wx, wy, color="#222222", lw=0.7)
+        axes.plot(wx, wy, color="#222222", lw=float(np.clip(14 / len(groups), 0.2, 0.7)))
         for part in _runs(np.isfinite(value) & (value > 0) & good):
             outline = np.concatenate([np.c_[wx[part], wy[part]], np.c_[x[part], y[part]][::-1]])
             axes.fill(*outline.T, color=BLUE, alpha=0.45, lw=0)
