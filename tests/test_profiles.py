@@ -250,6 +250,7 @@ def make_parts(n=6, **changed):
             "position_change_nt": np.full(n, np.nan),
             "sigma_joint_nt": np.full(n, np.nan),
             "sigma_datum_nt": np.full(n, 0.9),
+            "sigma_position_left_m": np.full(n, 2.0),
             "level_flags": np.zeros(n, "uint32"),
         },
     }
