@@ -27,6 +27,7 @@ from steps.screen import rejected
 from steps.settings import Levelling
 
 MANY = 1000  # nodes
+LAYBACK_M = 10.0  # expected error of a layback, where no record says it
 
 
 def in_order(lines: pd.DataFrame) -> pd.DataFrame:
@@ -181,8 +182,9 @@ def level(
     data = Crossings(mismatch - expected, parts, one, two)
     prior = np.zeros((len(surveys), len(EFFECTS), len(EFFECTS)))
     prior[:, :4, :4] = heading_covariance
-    for k, name in ((4, "sigma_diurnal_scale"), (5, "sigma_layback_m"), (6, "sigma_clock_s")):
-        prior[:, k, k] = getattr(settings, name) ** 2
+    prior[:, 4, 4] = settings.sigma_diurnal_scale**2
+    prior[:, 5, 5] = layback_variance(positions, len(surveys), settings)
+    prior[:, 6, 6] = settings.sigma_clock_s**2
     wanted = joint.wanted_terms(settings, data)
     optional = [term for term in joint.TERMS if term in wanted and getattr(settings, term) == "auto"]
     optional = [term for term in optional if term not in settings.apply]
@@ -250,6 +252,15 @@ def _with_results(crossings, rows, sign, posterior, first, second, m) -> pd.Data
         for row, text, size in zip(rows[rejected], texts, deviation[rejected], strict=True):
             status[row] = f"{text}, {size:.0f} sigma" if np.isfinite(size) else text
     return crossings.assign(residual_nt=residual, left_out_nt=left_out, weight=weight, status=status)
+
+
+def layback_variance(positions: list[dict] | None, surveys: int, settings: Levelling) -> np.ndarray:
+    """Return the prior variance of the layback error of each survey, m^2: the stage's own, unless it is set here."""
+    found = np.full(surveys, (settings.sigma_layback_m or LAYBACK_M) ** 2)
+    if settings.sigma_layback_m is None:
+        for s, record in enumerate((positions or [])[:surveys]):
+            found[s] = record.get("settings", {}).get("sigma_layback_m", LAYBACK_M) ** 2
+    return found
 
 
 def navigation_share(positions: list[dict] | None, surveys: int, settings: Levelling) -> np.ndarray:

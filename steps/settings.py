@@ -406,10 +406,12 @@ class Levelling(Section):
         10.0, gt=0, le=1000, description="expected size of a heading coefficient without calibration, nT"
     )
     sigma_diurnal_scale: float = Field(
-        0.1, gt=0, le=1, description="expected departure from 1 of the scale on the base stations' variation"
+        0.05, gt=0, le=1, description="expected departure from 1 of the scale on the base stations' variation"
     )
-    sigma_layback_m: float = Field(15.0, gt=0, le=1000, description="expected error of the layback, m")
-    sigma_clock_s: float = Field(1.5, gt=0, le=1000, description="expected error of the logger's clock, s")
+    sigma_layback_m: float | None = Field(
+        None, gt=0, le=1000, description="expected error of the layback, m; without it that of section position"
+    )
+    sigma_clock_s: float = Field(1.0, gt=0, le=1000, description="expected error of the logger's clock, s")
     sigma_without_base_nt: float = Field(
         20.0, gt=0, le=2000, description="expected size of the external variation where no base station tells it, nT"
     )
